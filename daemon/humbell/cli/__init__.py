@@ -1,0 +1,1 @@
+"""The commands: thin, and imported lazily so that each starts fast."""

@@ -1,0 +1,17 @@
+"""Reads the configuration file and composes the stages' own settings into one plan."""
+
+from humbell.config.load import Loaded, load, parse
+from humbell.config.site import Acceleration, Bearing, Machine, Point, Site, Speed, Velocity
+
+__all__ = [
+    "Acceleration",
+    "Bearing",
+    "Loaded",
+    "Machine",
+    "Point",
+    "Site",
+    "Speed",
+    "Velocity",
+    "load",
+    "parse",
+]

@@ -1,0 +1,133 @@
+"""The whole way from a configuration file to what it means, with every problem told at once."""
+
+import hashlib
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+
+from humbell.config.messages import Path as Place
+from humbell.config.messages import known, problem
+from humbell.config.site import Site
+from humbell.config.templates import apply_templates
+from humbell.config.tree import Tree, TreeError, read_tree
+from humbell.config.validate import validate
+from humbell.measures import Quantity, band_problem
+from humbell.model import ChannelId, ConfigError
+
+
+@dataclass(frozen=True, slots=True)
+class Loaded:
+    """
+    A configuration in force.
+
+    Args:
+        site: what it says.
+
+        path: its file.
+
+        digest: SHA-256 of the file, in hexadecimal; every stored thing knows under which configuration it was made.
+    """
+
+    site: Site
+    path: Path
+    digest: str
+
+
+def load(path: Path) -> Loaded:
+    """
+    Read a configuration file.
+
+    Raises:
+        ConfigError: it cannot be read or used; one line for each problem: file, line, path, what, and what to do.
+    """
+    try:
+        content = path.read_bytes()
+    except FileNotFoundError:
+        raise ConfigError(f"{path}: there is no such file (check the name)") from None
+    except OSError as error:
+        raise ConfigError(f"{path}: cannot be read: {error.strerror} (check the name and the rights)") from None
+    try:
+        text = content.decode()
+    except UnicodeDecodeError as error:
+        line = content[: error.start].count(b"\n") + 1
+        raise ConfigError(f"{path}:{line}: is no UTF-8 text (save it as UTF-8)") from None
+    return Loaded(parse(text, str(path)), path, hashlib.sha256(content).hexdigest())
+
+
+def parse(text: str, name: str) -> Site:
+    """
+    Return what the configuration *text* says.
+
+    Raises:
+        ConfigError: see `load`.
+    """
+    problems: list[str] = []
+    try:
+        tree = read_tree(text, name)
+    except TreeError as error:
+        if error.tree is None:
+            raise
+        problems += error.problems
+        tree = error.tree
+    site = None
+    try:
+        tree = apply_templates(tree)
+        problems += (problem(name, tree.line(place), place, said) for place, said in _wrong_channels(tree))
+        site = validate(Site, tree, name)
+        problems += (problem(name, tree.line(place), place, said) for place, said in _wrong_rates(site))
+    except ConfigError as error:
+        problems += error.problems
+    if site is None or problems:
+        raise ConfigError(*_in_order(problems, name))
+    return site
+
+
+def _in_order(problems: list[str], name: str) -> Iterator[str]:
+    """Return the problems by line; what was read wrongly in a line is not told again by those who look later."""
+    told: set[str] = set()
+    numbered = [(_line(text, name), text) for text in problems]
+    for _, text in sorted(numbered, key=lambda item: item[0]):
+        place = text.rpartition(" (")[0].removeprefix(name).split(": ")
+        key = ": ".join(place[:2])
+        if key not in told:
+            yield text
+        told.add(key)
+
+
+def _line(text: str, name: str) -> int:
+    number = text.removeprefix(f"{name}:").partition(":")[0]
+    return int(number) if number.isdigit() else 0
+
+
+def _wrong_channels(tree: Tree) -> Iterator[tuple[Place, str]]:
+    """Find channels of sources that are not there, and channels that two points claim. Other faults are passed over."""
+    sources, machines = tree.data.get("sources"), tree.data.get("machines")
+    if not isinstance(sources, dict) or not isinstance(machines, dict):
+        return
+    owners: dict[str, str] = {}
+    for machine, settings in machines.items():
+        points = settings.get("points") if isinstance(settings, dict) else None
+        for point, chosen in points.items() if isinstance(points, dict) else ():
+            channel = chosen.get("channel") if isinstance(chosen, dict) else None
+            place = ("machines", machine, "points", point, "channel")
+            try:
+                source = ChannelId.parse(str(channel)).source
+            except ValueError:
+                continue
+            if source not in sources:
+                yield place, f"there is no source '{source}' ({known(source, sources)})"
+            elif str(channel) in owners:
+                yield place, f"{channel} is the channel of {owners[str(channel)]} already (give each point its own)"
+            owners[str(channel)] = f"{machine}/{point}"
+
+
+def _wrong_rates(site: Site) -> Iterator[tuple[Place, str]]:
+    """Find bands that the rate of their source cannot carry, where the rate is known beforehand."""
+    for machine, settings in site.machines.items():
+        for point, chosen in settings.points.items():
+            rate_hz = site.sources[chosen.channel.source].rate_hz if chosen.channel.source in site.sources else None
+            for quantity, band in ((Quantity.VELOCITY, chosen.velocity), (Quantity.ACCELERATION, chosen.acceleration)):
+                if rate_hz is not None and band is not None:
+                    said = band_problem(band.band(quantity), rate_hz)
+                    if said:
+                        yield ("machines", machine, "points", point, quantity.value, "band_hz"), said

@@ -1,0 +1,24 @@
+"""From blocks to readings: frames, bands, overalls, and what makes a frame untrustworthy."""
+
+from humbell.measures.bank import Bank
+from humbell.measures.base import BandPlan, Measurer, PointPlan
+from humbell.measures.piece import lowest_edge_hz
+from humbell.measures.response import SAMPLES_PER_PERIOD, Band, Quantity, analogue, band_problem, highest_edge_hz
+from humbell.measures.settings import AccelerationBand, BandSettings, VelocityBand
+
+__all__ = [
+    "SAMPLES_PER_PERIOD",
+    "AccelerationBand",
+    "Band",
+    "BandPlan",
+    "BandSettings",
+    "Bank",
+    "Measurer",
+    "PointPlan",
+    "Quantity",
+    "VelocityBand",
+    "analogue",
+    "band_problem",
+    "highest_edge_hz",
+    "lowest_edge_hz",
+]

@@ -1,0 +1,60 @@
+"""Looks at raw signal for what makes it untrustworthy: lost values, a dead sensor, clipping."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from humbell.measures.rails import Rails
+
+# No working sensor and converter give the same number so long; 128 samples keep a coarse slow converter out of it.
+_FLAT_S, _FLAT_SAMPLES = 0.1, 128
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Findings:
+    """
+    What the check found in one frame, one value a channel.
+
+    Args:
+        non_finite: there are values that are no numbers.
+
+        flat: the signal stood still for a tenth of a second or more.
+
+        clipped: samples at the converter's rail.
+    """
+
+    non_finite: NDArray[np.bool_]
+    flat: NDArray[np.bool_]
+    clipped: NDArray[np.int_]
+
+    @property
+    def dead(self) -> NDArray[np.bool_]:
+        """Channels whose frame holds nothing to filter."""
+        return np.asarray(self.non_finite | self.flat)
+
+
+class SensorCheck:
+    """
+    Judges frame after frame, or piece after piece; all that it remembers is what it learnt about the rails.
+
+    Args:
+        rate_hz: samples a second.
+
+        full_scale: (channels,) magnitude of the rail, m/s²; NaN where it is unknown.
+    """
+
+    def __init__(self, rate_hz: float, full_scale: NDArray[np.float64]) -> None:
+        self._rails = Rails(full_scale)
+        self._flat_window = max(round(_FLAT_S * rate_hz), _FLAT_SAMPLES)
+
+    def judge(self, samples: NDArray[np.float64]) -> Findings:
+        """Return what is wrong with each channel of *samples* (channels, n), m/s²."""
+        starts = np.arange(0, max(samples.shape[1] - self._flat_window, 0) + 1, self._flat_window)
+        highest = np.maximum.reduceat(samples, starts, axis=1)
+        lowest = np.minimum.reduceat(samples, starts, axis=1)
+        non_finite = np.asarray(~(np.isfinite(highest) & np.isfinite(lowest)).all(axis=1))
+        flat = np.asarray((highest == lowest).any(axis=1) & ~non_finite)
+        alive = ~(non_finite | flat)
+        clipped = self._rails.count(samples, lowest.min(axis=1), highest.max(axis=1), alive)
+        return Findings(non_finite, flat, clipped)

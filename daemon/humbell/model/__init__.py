@@ -1,0 +1,38 @@
+"""The words that all stages share. Imports nothing of ours."""
+
+from humbell.model.alarm import AlarmId, AlarmType, LifeCycle, Transition
+from humbell.model.block import Block, Samples
+from humbell.model.errors import ConfigError, HumbellError, InputError, OutOfReachError
+from humbell.model.ids import ChannelId, Id, PointId
+from humbell.model.quality import GOOD, MAY_RAISE, Cause, Coverage, Quality, Verdict, coverage_of
+from humbell.model.reading import UNITS, Measure, Reading
+from humbell.model.units import STANDARD_GRAVITY, SampleUnit, Unit
+
+__all__ = [
+    "GOOD",
+    "MAY_RAISE",
+    "STANDARD_GRAVITY",
+    "UNITS",
+    "AlarmId",
+    "AlarmType",
+    "Block",
+    "Cause",
+    "ChannelId",
+    "ConfigError",
+    "Coverage",
+    "HumbellError",
+    "Id",
+    "InputError",
+    "LifeCycle",
+    "Measure",
+    "OutOfReachError",
+    "PointId",
+    "Quality",
+    "Reading",
+    "SampleUnit",
+    "Samples",
+    "Transition",
+    "Unit",
+    "Verdict",
+    "coverage_of",
+]
