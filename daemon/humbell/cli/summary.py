@@ -6,10 +6,11 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
+from humbell.alarms import in_alarm
 from humbell.app.jsonlines import utc_text
-from humbell.app.wiring import JUDGED, bands_of, points_of
+from humbell.app.wiring import JUDGED, bands_of, plan_all_alarms, points_of
 from humbell.config import Site
-from humbell.model import UNITS, Coverage, LifeCycle, Measure, PointId, Quality, Reading, Transition, Unit
+from humbell.model import UNITS, AlarmId, Coverage, Measure, PointId, Quality, Reading, Transition, Unit
 from humbell.sources import Recording
 
 # Every amplitude is told with what it is.
@@ -34,10 +35,13 @@ class Summary:
         self._values: dict[tuple[PointId, Measure], list[float]] = defaultdict(list)
         self._causes: dict[PointId, dict[str, int]] = defaultdict(lambda: defaultdict(int))
         self._transitions: list[Transition] = []
+        # Nothing is known of an alarm until a good value says so.
+        self._verified = {plan.id: (False, 0) for plan in plan_all_alarms(site)}
 
     def feed(self, told: Reading | Transition) -> None:
         """Take one reading or transition."""
         if isinstance(told, Transition):
+            self._verified[told.alarm] = (told.verified, told.time_ns)
             if told.before is not told.after:
                 self._transitions.append(told)
             return
@@ -61,11 +65,13 @@ class Summary:
         return "\n".join(lines)
 
     def _alarms(self) -> list[str]:
+        unknown = [_unknown(alarm, since_ns) for alarm, (verified, since_ns) in self._verified.items() if not verified]
+        lines = ["Not known at the end, for want of good values:", *unknown, ""] if unknown else []
         if not self._transitions:
-            return ["No alarm was raised."]
-        standing = {t.alarm: t.after for t in self._transitions}
-        count = sum(state is not LifeCycle.NORMAL for state in standing.values())
-        return [f"Alarms: {count} standing at the end", *map(_transition, self._transitions)]
+            return [*lines, "No alarm was raised."]
+        last = {transition.alarm: transition.after for transition in self._transitions}
+        count = sum(in_alarm(state) for state in last.values())
+        return [*lines, f"Alarms: {count} standing at the end", *map(_transition, self._transitions)]
 
 
 def _recording(recording: Recording) -> str:
@@ -91,6 +97,11 @@ def _statistics(measure: Measure, unit: Unit, values: list[float]) -> str:
 
 def _seconds(seconds: Mapping[Coverage, float]) -> str:
     return "  " + (", ".join(f"{category} {value:.4g} s" for category, value in seconds.items()) or "nothing measured")
+
+
+def _unknown(alarm: AlarmId, since_ns: int) -> str:
+    since = f"since {utc_text(since_ns)}" if since_ns else "from the beginning"
+    return f"  {alarm.machine}/{alarm.point} {alarm.name}, {since}"
 
 
 def _transition(transition: Transition) -> str:

@@ -15,6 +15,9 @@ from humbell.measures.verdicts import read, verdict
 from humbell.model import GOOD, Block, Cause, ConfigError, Quality, Reading, Verdict
 
 
+_BATCH = 4
+
+
 class Bank:
     """
     Measures the points of one source.
@@ -40,7 +43,9 @@ class Bank:
         lower_hz = min((plan.band.lower_hz for point in points for plan in point.bands), default=1.0)
         ahead_s = StepSearch.ahead_s(lower_hz)
         self._groups = [
-            FrameGroup(rate_hz, frame_s, ahead_s, _with_frame(points, frame_s), full_scale) for frame_s in lengths
+            FrameGroup(rate_hz, frame_s, ahead_s, batch, full_scale)
+            for frame_s in lengths
+            for batch in _batches([point for point in points if any(plan.frame_s == frame_s for plan in point.bands)])
         ]
         self._gain = np.array([point.gain for point in points])
         rail = np.nan if full_scale is None else full_scale
@@ -82,8 +87,9 @@ class Bank:
                 )
 
 
-def _with_frame(points: Sequence[PointPlan], frame_s: float) -> list[PointPlan]:
-    return [point for point in points if any(plan.frame_s == frame_s for plan in point.bands)]
+def _batches(points: Sequence[PointPlan]) -> Iterator[Sequence[PointPlan]]:
+    for first in range(0, len(points), _BATCH):
+        yield points[first : first + _BATCH]
 
 
 def _out_of_band(point: PointPlan, rate_hz: float) -> Iterator[str]:

@@ -21,7 +21,7 @@ class BandSettings(BaseModel):
         Field(
             ge=0.1,
             le=60,
-            description="seconds of signal in one reading; default: 1, or 10 periods of the lower edge where that is more",
+            description="seconds of signal in one reading; default: 1, or 10 periods of the lower edge if more",
         ),
     ] = None
 

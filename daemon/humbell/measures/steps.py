@@ -80,10 +80,11 @@ class StepSearch:
 
 
 def _median(history: NDArray[np.float64], otherwise: NDArray[np.float64]) -> NDArray[np.float64]:
-    known = ~np.isnan(history).all(axis=0)
-    median = otherwise.copy()
-    median[known] = np.nanmedian(history[:, known], axis=0)
-    return median
+    """Return the lower median of what is known, column by column; *otherwise* where nothing is."""
+    known = np.count_nonzero(~np.isnan(history), axis=0)
+    ordered = np.sort(history, axis=0)  # unknown ones come last
+    median = ordered[np.maximum(known - 1, 0) // 2, np.arange(len(known))]
+    return np.where(known > 0, median, otherwise)
 
 
 def _step_kernel() -> NDArray[np.float64]:

@@ -59,6 +59,7 @@ class NpzFile:
         with _opened(path) as archive:
             names = {info.filename.removesuffix(".npy"): info for info in archive.infolist()}
             self._check_names(names, source, settings.unit)
+            self._samples_name = names["x"].filename
             pieces, channels, length = self._check_x(archive, names["x"])
             starts = self._piece_starts(archive, names, pieces)
             self.header = Header(
@@ -83,7 +84,7 @@ class NpzFile:
             InputError: the file cannot be read any more, or is too big for this computer.
         """
         with _opened(self.path) as archive:
-            stored = _read(archive, "x.npy")
+            stored = _read(archive, self._samples_name)
         header = self.header
         if stored.size != max(header.pieces, 1) * header.channels * header.length:
             raise InputError(f"{self.path}: has changed since it was checked (start again)")
@@ -187,7 +188,7 @@ def _opened(path: Path) -> Iterator[zipfile.ZipFile]:
         raise InputError(f"{path}: does not fit into memory (split it)") from None
     except HumbellError:
         raise
-    # Damaged bytes make zipfile, four decompressors, numpy, ast and tokenize raise what no list of ours could keep up with.
+    # zipfile, its decompressors, numpy, ast and tokenize raise more kinds of errors than a list could keep up with.
     except Exception as error:  # noqa: BLE001
         what = one_line(error) if isinstance(error, _TELLING) else "its arrays cannot be read"
         raise InputError(f"{path}: is damaged: {what} (copy it again)") from None

@@ -72,7 +72,7 @@ class WavFile:
         three_bytes = self._format.bits == _THREE_BYTES
         try:
             stored = self._map_bytes() if three_bytes else _map(self.path)
-        except (ValueError, ArithmeticError, NameError, OSError, MemoryError, struct.error, Warning) as error:
+        except (ValueError, OSError, struct.error, Warning) as error:
             raise InputError(f"{self.path}: cannot be read: {one_line(error)} (copy or record it again)") from None
         if stored.shape[:2] != (self.header.length, self.header.channels):
             raise InputError(f"{self.path}: says two things about its length (save it anew from the recorder)")
