@@ -167,7 +167,7 @@ def test_records_tests_are_skipped_and_counted_where_there_are_none(run: pytest.
     """Only tests of the records may be skipped, only without the folder, and the summary says how many."""
     result = run.runpytest_inprocess(run.makepyfile(RECORDS_TESTS))
     result.assert_outcomes(skipped=2)
-    result.stdout.fnmatch_lines(["records: folder absent, 2 tests skipped (*records)", "2 skipped in *"])
+    result.stdout.fnmatch_lines(["records: folder absent, 2 tests skipped (*records)", "*2 skipped in *"])
 
 
 def test_records_tests_run_where_there_are_some(run: pytest.Pytester) -> None:
@@ -177,7 +177,7 @@ def test_records_tests_run_where_there_are_some(run: pytest.Pytester) -> None:
     (folder / "README.md").touch()
     result = run.runpytest_inprocess(run.makepyfile(RECORDS_TESTS))
     result.assert_outcomes(passed=2)
-    result.stdout.fnmatch_lines(["records: 1 files of measured machines in *records", "2 passed in *"])
+    result.stdout.fnmatch_lines(["records: 1 files of measured machines in *records", "*2 passed in *"])
 
 
 def test_a_records_test_may_not_skip_for_another_reason(run: pytest.Pytester) -> None:
@@ -199,8 +199,8 @@ def test_figures_stand_before_the_last_line(run: pytest.Pytester) -> None:
     """What a test reports through `figure` is printed at the end, and pytest's summary stays the last line."""
     path = run.makepyfile("def test_measures(figure) -> None: figure('ratio', '1.02 of 1')")
     result = run.runpytest_inprocess(path)
-    result.stdout.fnmatch_lines(["*figures*", "ratio: 1.02 of 1", "1 passed in *"])
-    assert result.outlines[-1].startswith("1 passed in ")
+    result.stdout.fnmatch_lines(["=* figures =*", "ratio: 1.02 of 1"])
+    assert "1 passed in " in result.outlines[-1]
 
 
 def test_generated_examples_are_the_same_in_every_run(run: pytest.Pytester) -> None:

@@ -16,14 +16,25 @@ class LimitSettings(BaseModel):
 
     high: Annotated[
         float | None,
-        Field(gt=0, description="limit of the alarm `high`, in the unit of the measure, RMS; none: not judged"),
+        Field(
+            gt=0,
+            allow_inf_nan=False,
+            description="limit of the alarm `high`, in the unit of the measure, RMS; none: not judged",
+        ),
     ] = None
     high_high: Annotated[
-        float | None, Field(gt=0, description="limit of the alarm `high_high`, above `high`; none: no such alarm")
+        float | None,
+        Field(
+            gt=0, allow_inf_nan=False, description="limit of the alarm `high_high`, above `high`; none: no such alarm"
+        ),
     ] = None
     deadband: Annotated[
         float | None,
-        Field(ge=0, description="an alarm returns below limit - deadband; default: a tenth of the lowest limit"),
+        Field(
+            ge=0,
+            allow_inf_nan=False,
+            description="an alarm returns below limit - deadband; default: a tenth of the lowest limit",
+        ),
     ] = None
     on_delay_s: Annotated[
         float, Field(ge=0, le=3600, description="seconds of signal at or above a limit before its alarm is raised")
@@ -73,6 +84,8 @@ class LimitSettings(BaseModel):
             return value
         limits: dict[str, float] = {name: info.data[name] for name in ("high", "high_high") if info.data.get(name)}
         if not limits:
+            if not {"high", "high_high"} <= info.data.keys():
+                return value  # a limit is there, but is wrong itself: one message is enough
             raise ValueError(f"{value:g} has no limit to belong to (give high, or leave the deadband out)")
         name, lowest = next(iter(limits.items()))
         if value >= lowest:

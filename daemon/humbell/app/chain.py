@@ -10,8 +10,6 @@ from humbell.measures import Bank
 from humbell.model import Block, Reading, SampleUnit, Transition
 from humbell.sources import Continuity, Join
 
-# What leaves a stream unbroken; anything else ends it.
-_UNBROKEN = frozenset({Join.CONTINUES, Join.PIECE})
 _DROPPED = frozenset({Join.DUPLICATE, Join.LATE})
 
 
@@ -51,6 +49,7 @@ class _Line:
         self._kind: SignalKind | None = None
         self._bank: Bank | None = None
         self._end_ns = 0
+        self._streaming = False
 
     def prepare(self, kind: SignalKind) -> Bank:
         points = plan_points(self._site, self._source, kind.unit, kind.channels)
@@ -61,12 +60,15 @@ class _Line:
         if join.join in _DROPPED:
             return []
         readings = []
-        if self._bank is not None and join.join not in _UNBROKEN:
-            readings = self._bank.reset(join.missing_s, block.start_ns)
         kind = SignalKind.of(block)
+        # What waits for the rest of its frame is told before anything that does not follow on it.
+        if self._bank is not None and self._streaming and (join.join is not Join.CONTINUES or kind != self._kind):
+            lost_until_ns = max(block.start_ns, self._end_ns) if join.missing_s > 0 else self._end_ns
+            readings = self._bank.reset(join.missing_s, lost_until_ns)
         if self._bank is None or kind != self._kind:
             self._bank, self._kind = self.prepare(kind), kind
         self._end_ns = block.end_ns
+        self._streaming = not block.piece
         return readings + self._bank.feed(block)
 
     def end(self) -> list[Reading]:

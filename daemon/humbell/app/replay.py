@@ -11,6 +11,9 @@ from humbell.config import Site
 from humbell.model import ChannelId, ConfigError, Coverage, PointId, Reading, Transition
 from humbell.sources import EndOfSource, Recording, ReplaySettings, ReplaySource
 
+# The year 2200: what lies beyond is no time that anybody means, and calendars of computers end somewhere.
+_LATEST_S = 7_258_118_400.0
+
 
 @dataclass(frozen=True, slots=True)
 class ReplayRequest:
@@ -57,6 +60,7 @@ class Replay:
             source, settings, request.files, request.start_ns, piece_every_s=request.piece_every_s
         )
         self._source.open()
+        _check_end(self._source.recordings[-1], request)
         self._chain = Chain(self.site, occurrence_names(site, node_id(site, read_serial)))
         self._tally = Tally(self.site)
         for recording in self._source.recordings:
@@ -107,6 +111,12 @@ class Replay:
             if isinstance(one, Reading):
                 self._tally.feed(one)
             yield one
+
+
+def _check_end(last: Recording, request: ReplayRequest) -> None:
+    every_s = request.piece_every_s or last.length / last.rate_hz
+    if last.start_ns / 1e9 + max(last.pieces, 1) * every_s > _LATEST_S:
+        raise ConfigError("the replay would end in the year 2200 or later (give an earlier --start, or a shorter time)")
 
 
 def _replay_source(site: Site) -> tuple[str, ReplaySettings]:

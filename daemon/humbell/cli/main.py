@@ -1,7 +1,11 @@
 """The command line: what each command takes. What it does is imported when it is called."""
 
+import errno
+import io
 import os
 import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Annotated
 
@@ -12,6 +16,8 @@ from humbell.model.errors import ConfigError, InputError, OutOfReachError
 
 EXIT_WRONG_USE = 2
 EXIT_OUT_OF_REACH = 3
+
+_YEAR_S = 366 * 86_400.0  # no sensor sleeps longer, and times stay such as can be printed
 
 app = typer.Typer(
     name="humbell",
@@ -48,7 +54,8 @@ def check(config: Config, json: AsJson = False) -> None:
     """Read a configuration, and print what would be watched, by which limits, and what would not."""
     from humbell.cli.check import run  # noqa: PLC0415 - a command is imported when it is called
 
-    run(config, as_json=json)
+    with _printing():
+        run(config, as_json=json)
 
 
 @app.command()
@@ -56,7 +63,8 @@ def schema() -> None:
     """Print the JSON Schema of the configuration, for editors."""
     from humbell.cli.schema import run  # noqa: PLC0415 - a command is imported when it is called
 
-    run()
+    with _printing():
+        run()
 
 
 @app.command()
@@ -79,14 +87,41 @@ def replay(
         ),
     ] = None,
     piece_every: Annotated[
-        float | None, typer.Option(metavar="SECONDS", help="From the start of one piece to that of the next.")
+        float | None,
+        typer.Option(metavar="SECONDS", max=_YEAR_S, help="From the start of one piece to that of the next."),
     ] = None,
     json: AsJson = False,
 ) -> None:
     """Run recorded files through the same chain as live signals, as fast as they are read."""
     from humbell.cli.replay import run  # noqa: PLC0415 - a command is imported when it is called
 
-    run(config, files, point or [], start, piece_every, as_json=json)
+    with _printing():
+        run(config, files, point or [], start, piece_every, as_json=json)
+
+
+class _ReadEnoughError(Exception):
+    """Whoever reads our output has read enough, as `head` does. Under its own name Typer would make a failure of it."""
+
+
+@contextmanager
+def _printing() -> Iterator[None]:
+    """Print all that is printed inside, to the last letter."""
+    try:
+        yield
+        print(end="", flush=True)
+    except BrokenPipeError:
+        _drop_output()
+        raise _ReadEnoughError from None
+    except OSError as error:
+        if error.errno != errno.ENOSPC:
+            raise
+        _drop_output()
+        raise OutOfReachError("standard output: the disk is full (make room, or write elsewhere)") from None
+
+
+def _drop_output() -> None:
+    # Python would try again at exit, and complain.
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def main() -> None:
@@ -94,15 +129,15 @@ def main() -> None:
     # More threads only get in each other's way on a small computer that does other things. Before NumPy is imported.
     for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS"):
         os.environ.setdefault(name, "1")
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")  # an old terminal's alphabet is no reason to stop
     try:
         app()
     except ConfigError as error:
         _complain(error, EXIT_WRONG_USE)
     except (InputError, OutOfReachError) as error:
         _complain(error, EXIT_OUT_OF_REACH)
-    except BrokenPipeError:
-        # Whoever reads our output has read enough, as `head` does. Python would complain once more at exit.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    except _ReadEnoughError:
         sys.exit(0)
 
 

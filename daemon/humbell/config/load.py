@@ -5,14 +5,17 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
+from pydantic import ValidationError
+
 from humbell.config.messages import Path as Place
 from humbell.config.messages import known, problem
-from humbell.config.site import Site
+from humbell.config.site import Acceleration, Site, Velocity
 from humbell.config.templates import apply_templates
-from humbell.config.tree import Tree, TreeError, read_tree
+from humbell.config.tree import Tree, TreeError, Value, read_tree
 from humbell.config.validate import validate
 from humbell.measures import Quantity, band_problem
 from humbell.model import ChannelId, ConfigError
+from humbell.sources import ReplaySettings
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,9 +75,9 @@ def parse(text: str, name: str) -> Site:
     site = None
     try:
         tree = apply_templates(tree)
-        problems += (problem(name, tree.line(place), place, said) for place, said in _wrong_channels(tree))
+        for wrong in (_wrong_channels, _wrong_rates):
+            problems += (problem(name, tree.line(place), place, said) for place, said in wrong(tree))
         site = validate(Site, tree, name)
-        problems += (problem(name, tree.line(place), place, said) for place, said in _wrong_rates(site))
     except ConfigError as error:
         problems += error.problems
     if site is None or problems:
@@ -99,35 +102,49 @@ def _line(text: str, name: str) -> int:
     return int(number) if number.isdigit() else 0
 
 
-def _wrong_channels(tree: Tree) -> Iterator[tuple[Place, str]]:
-    """Find channels of sources that are not there, and channels that two points claim. Other faults are passed over."""
-    sources, machines = tree.data.get("sources"), tree.data.get("machines")
-    if not isinstance(sources, dict) or not isinstance(machines, dict):
-        return
-    owners: dict[str, str] = {}
-    for machine, settings in machines.items():
+def _points(tree: Tree) -> Iterator[tuple[Place, dict[str, Value], ChannelId]]:
+    """Return path, settings and channel of each point that has a channel. Other faults are passed over."""
+    machines = tree.data.get("machines")
+    for machine, settings in machines.items() if isinstance(machines, dict) else ():
         points = settings.get("points") if isinstance(settings, dict) else None
         for point, chosen in points.items() if isinstance(points, dict) else ():
-            channel = chosen.get("channel") if isinstance(chosen, dict) else None
-            place = ("machines", machine, "points", point, "channel")
+            if not isinstance(chosen, dict):
+                continue
             try:
-                source = ChannelId.parse(str(channel)).source
+                channel = ChannelId.parse(str(chosen.get("channel")))
             except ValueError:
                 continue
-            if source not in sources:
-                yield place, f"there is no source '{source}' ({known(source, sources)})"
-            elif str(channel) in owners:
-                yield place, f"{channel} is the channel of {owners[str(channel)]} already (give each point its own)"
-            owners[str(channel)] = f"{machine}/{point}"
+            yield ("machines", machine, "points", point), chosen, channel
 
 
-def _wrong_rates(site: Site) -> Iterator[tuple[Place, str]]:
+def _wrong_channels(tree: Tree) -> Iterator[tuple[Place, str]]:
+    """Find channels of sources that are not there, and channels that two points claim."""
+    sources = tree.data.get("sources")
+    if not isinstance(sources, dict):
+        return
+    owners: dict[ChannelId, str] = {}
+    for path, _, channel in _points(tree):
+        place = (*path, "channel")
+        if channel.source not in sources:
+            yield place, f"there is no source '{channel.source}' ({known(channel.source, sources)})"
+        elif channel in owners:
+            yield place, f"{channel} is the channel of {owners[channel]} already (give each point its own)"
+        owners.setdefault(channel, f"{path[1]}/{path[3]}")
+
+
+def _wrong_rates(tree: Tree) -> Iterator[tuple[Place, str]]:
     """Find bands that the rate of their source cannot carry, where the rate is known beforehand."""
-    for machine, settings in site.machines.items():
-        for point, chosen in settings.points.items():
-            rate_hz = site.sources[chosen.channel.source].rate_hz if chosen.channel.source in site.sources else None
-            for quantity, band in ((Quantity.VELOCITY, chosen.velocity), (Quantity.ACCELERATION, chosen.acceleration)):
-                if rate_hz is not None and band is not None:
-                    said = band_problem(band.band(quantity), rate_hz)
-                    if said:
-                        yield ("machines", machine, "points", point, quantity.value, "band_hz"), said
+    sources = tree.data.get("sources")
+    for path, chosen, channel in _points(tree):
+        try:
+            source = ReplaySettings.model_validate(sources.get(channel.source) if isinstance(sources, dict) else None)
+        except ValidationError:
+            continue
+        for quantity, model in ((Quantity.VELOCITY, Velocity), (Quantity.ACCELERATION, Acceleration)):
+            try:
+                band = model.model_validate(chosen.get(quantity.value, {})).band(quantity)
+            except ValidationError:  # another fault, or a band that is not measured
+                continue
+            said = band_problem(band, source.rate_hz) if source.rate_hz is not None else None
+            if said:
+                yield (*path, quantity.value, "band_hz"), said

@@ -19,6 +19,9 @@ def _channel(value: object) -> object:
     return ChannelId.parse(str(value))
 
 
+_Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+
+
 class _Settings(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid")
 
@@ -35,12 +38,12 @@ class Bearing(_Settings):
     """A rolling bearing, by its geometry or by the multiples of shaft speed that its maker gives."""
 
     elements: Annotated[int | None, Field(ge=3, le=200, description="number of rolling elements in a row")] = None
-    element_mm: Annotated[float | None, Field(gt=0, description="diameter of a rolling element, mm")] = None
-    pitch_mm: Annotated[float | None, Field(gt=0, description="pitch diameter, mm")] = None
+    element_mm: Annotated[_Positive | None, Field(description="diameter of a rolling element, mm")] = None
+    pitch_mm: Annotated[_Positive | None, Field(description="pitch diameter, mm")] = None
     angle_deg: Annotated[float, Field(ge=0, lt=90, description="contact angle, degrees")] = 0.0
-    bpfo: Annotated[float | None, Field(gt=0, description="outer race defects a turn of the shaft")] = None
-    bpfi: Annotated[float | None, Field(gt=0, description="inner race defects a turn of the shaft")] = None
-    bsf: Annotated[float | None, Field(gt=0, description="turns of a rolling element a turn of the shaft")] = None
+    bpfo: Annotated[_Positive | None, Field(description="outer race defects a turn of the shaft")] = None
+    bpfi: Annotated[_Positive | None, Field(description="inner race defects a turn of the shaft")] = None
+    bsf: Annotated[_Positive | None, Field(description="turns of a rolling element a turn of the shaft")] = None
     ftf: Annotated[float | None, Field(gt=0, lt=1, description="turns of the cage a turn of the shaft")] = None
 
     @model_validator(mode="after")

@@ -14,7 +14,6 @@ from humbell.measures.steps import StepSearch
 from humbell.measures.verdicts import read, verdict
 from humbell.model import GOOD, Block, Cause, ConfigError, Quality, Reading, Verdict
 
-
 _BATCH = 4
 
 

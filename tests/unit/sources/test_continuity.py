@@ -46,6 +46,7 @@ def test_blocks_in_order_continue() -> None:
 def test_a_number_left_out_is_a_gap_as_long_as_the_times_say() -> None:
     """Three blocks of 0.25 s are missing between numbers 0 and 4."""
     assert joins(block(0), block(4))[1] == ("gap", 0.75)
+    assert joins(block(0), block(4, BLOCK_NS + 10**9))[1] == ("gap", 1.0)
 
 
 def test_a_gap_without_a_time_is_as_long_as_the_blocks_that_are_missing() -> None:
@@ -55,7 +56,7 @@ def test_a_gap_without_a_time_is_as_long_as_the_blocks_that_are_missing() -> Non
 
 
 def test_a_time_that_runs_away_is_a_gap_though_the_numbers_go_on() -> None:
-    """A sender that drops samples inside itself shows it in time only; backwards nothing is missing, nor joined."""
+    """A sender that drops samples inside itself shows it in time alone; backwards nothing is missing, nor joined."""
     assert joins(block(0), block(1, BLOCK_NS + 60_000_000))[1] == ("gap", 0.06)
     assert joins(block(0), block(1, BLOCK_NS - 60_000_000))[1] == ("gap", 0.0)
 
@@ -80,7 +81,7 @@ def test_a_slow_drift_of_the_senders_clock_adds_up_to_no_gap(ppm: int) -> None:
 
 
 def test_a_repeated_block_is_a_duplicate_and_changes_nothing() -> None:
-    """Redelivery is normal: the same number within the last 256 blocks of its run is dropped, and the stream goes on."""
+    """Redelivery is normal: a number that came within the last 256 blocks is dropped, and the stream goes on."""
     found = joins(block(0), block(1), block(1), block(0), block(2))
     assert [join for join, _ in found] == ["first", "continues", "duplicate", "duplicate", "continues"]
 
@@ -98,7 +99,8 @@ def test_what_is_remembered_of_numbers_is_bounded() -> None:
         continuity.feed(block(seq))
     assert continuity.feed(block(2)).join is Join.DUPLICATE
     assert continuity.feed(block(1)).join is Join.LATE
-    assert Continuity(window_blocks=0).feed(block(1)).join is Join.FIRST
+    none = Continuity(window_blocks=0)
+    assert [none.feed(one).join for one in (block(1), block(1), block(2))] == ["first", "duplicate", "continues"]
 
 
 def test_a_new_boot_id_is_a_restart_with_the_time_between_missing() -> None:
@@ -114,6 +116,12 @@ def test_what_was_left_over_from_before_a_restart_is_dropped() -> None:
         block(0), block(1), block(0, 5 * BLOCK_NS, boot="b"), block(1), block(2), block(1, 6 * BLOCK_NS, boot="b")
     )
     assert [join for join, _ in found] == ["first", "continues", "restart", "duplicate", "late", "continues"]
+
+
+def test_a_boot_id_that_comes_back_later_is_a_restart() -> None:
+    """A sender whose boot ids repeat is not dropped for ever: samples from behind the last ones are new."""
+    found = joins(block(7), block(0, 10 * BLOCK_NS, boot="b"), block(8, 20 * BLOCK_NS))
+    assert [join for join, _ in found] == ["first", "restart", "restart"]
 
 
 def test_another_rate_or_number_of_channels_is_a_restart() -> None:

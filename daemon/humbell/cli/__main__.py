@@ -1,0 +1,5 @@
+"""Lets `python -m humbell.cli` be the command line."""
+
+from humbell.cli.main import main
+
+main()
