@@ -52,12 +52,18 @@ def place(headers: Sequence[Header], start_ns: int | None, piece_every_s: float 
     Raises:
         ConfigError: *piece_every_s* is shorter than a piece.
 
-        InputError: a file begins before the one that it follows.
+        InputError: a file begins before the one that it follows, or only later files have times of their own.
     """
     placed: list[Placed] = []
     for index, header in enumerate(headers):
         before = placed[-1] if placed else None
         own_ns = header.start_ns if start_ns is None else None
+        if own_ns is not None and headers[0].start_ns is None:
+            # What follows 1970 by decades would be told as samples lost.
+            raise InputError(
+                f"{header.path}: has a time of its own, but {headers[0].path.name} before it has none "
+                "(give a start time for all)"
+            )
         if own_ns is not None:
             first_ns = own_ns
         elif before is not None:

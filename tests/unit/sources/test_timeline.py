@@ -93,6 +93,14 @@ def test_files_out_of_order_are_refused(tmp_path: Path) -> None:
     assert starts(play(late, early, start_ns=0)) == [0, 1_000_000]
 
 
+def test_a_dated_file_behind_an_undated_one_is_refused(tmp_path: Path) -> None:
+    """Nobody knows how much lies between them, and 1970 is no answer; a start for all settles it."""
+    bare, dated = npz(tmp_path / "a.npz", [1, 2]), npz(tmp_path / "b.npz", [1, 2], start_ns=START_NS)
+    with pytest.raises(InputError, match=r"b\.npz: has a time of its own, but a\.npz .* \(give a start time for all\)"):
+        play(bare, dated)
+    assert len(play(bare, dated, start_ns=START_NS)) == 2
+
+
 def test_pieces_lie_as_the_caller_says_or_the_file_or_end_to_end(tmp_path: Path) -> None:
     """An interval that was asked for counts most, then the file's own times, then one piece follows the other."""
     x = np.arange(3 * 100).reshape(3, 1, 100)
