@@ -5,6 +5,7 @@ from numpy.typing import NDArray
 from scipy import signal
 
 from humbell.measures.fitting import Design
+from humbell.measures.framing import Signal
 
 
 class Bandpass:
@@ -24,8 +25,8 @@ class Bandpass:
         factor = design.factor
         # Row k weighs the samples of the group that came k groups after the output's oldest one.
         self._rows = np.ascontiguousarray(design.fir[::-1].reshape(-1, factor))
-        self._tail = np.zeros((channels, design.fir.size - factor))
-        self._pending = np.zeros((channels, 0))
+        self._tail: Signal = np.zeros((channels, design.fir.size - factor))
+        self._pending: Signal = np.zeros((channels, 0))
 
     def restart(self, channels: NDArray[np.intp], first: NDArray[np.float64]) -> None:
         """
@@ -40,7 +41,7 @@ class Bandpass:
         self._tail[channels] = first[:, None]
         self._pending[channels] = first[:, None]
 
-    def feed(self, samples: NDArray[np.float64]) -> NDArray[np.float64]:
+    def feed(self, samples: Signal) -> NDArray[np.float64]:
         """
         Return the next outputs (channels, m) for the next inputs (channels, n).
 
@@ -48,22 +49,24 @@ class Bandpass:
         """
         decimated = samples if self._design.factor == 1 else self._decimate(samples)
         if not decimated.size:  # fewer samples than one output needs; SciPy takes no empty arrays
-            return decimated
+            return np.zeros(decimated.shape)
         output, self._state = signal.sosfilt(self._design.sos, decimated, axis=-1, zi=self._state)
         return np.asarray(output)
 
-    def _decimate(self, samples: NDArray[np.float64]) -> NDArray[np.float64]:
+    def _decimate(self, samples: Signal) -> Signal:
         # All groups of `factor` samples times all groups of the FIR is one matrix product; an output is the sum along a
-        # diagonal of it. One channel at a time, so that all of it stays in the processor's cache.
+        # diagonal of it. One channel at a time, so that all of it stays in the processor's cache, and in the type of
+        # the samples: a FIR has no memory in which the rounding of float32 could grow.
         rows, factor = self._rows.shape
-        joined = np.concatenate([self._tail, self._pending, samples], axis=1)
+        weights = self._rows.astype(samples.dtype)
+        joined: Signal = np.asarray(np.concatenate([self._tail, self._pending, samples], axis=1), dtype=samples.dtype)
         whole = joined.shape[1] // factor * factor
         self._pending = joined[:, whole:].copy()
         self._tail = joined[:, whole - self._tail.shape[1] : whole].copy()
         count = whole // factor - rows + 1
-        outputs = np.empty((len(joined), count))
+        outputs = np.empty((len(joined), count), samples.dtype)
         for i, channel in enumerate(joined):
-            products = self._rows @ channel[:whole].reshape(-1, factor).T
+            products = weights @ channel[:whole].reshape(-1, factor).T
             outputs[i] = products[0, :count]
             for k in range(1, rows):
                 outputs[i] += products[k, k : k + count]

@@ -8,6 +8,9 @@ from numpy.typing import NDArray
 
 from humbell.model import Samples
 
+# Frames keep the source's resolution; filters compute in float64 whatever comes in.
+Signal = NDArray[np.float32] | NDArray[np.float64]
+
 # A sender's clock that wanders this far from the count of its samples is followed; less is jitter of its time stamps.
 _FOLLOW_NS = 5_000_000
 
@@ -18,15 +21,15 @@ class Frame:
     A stretch of signal.
 
     Args:
-        samples: (channels, n), m/s².
+        samples: (channels, n), in the unit and type of the source.
 
         ahead: (channels, k) what follows, k samples or fewer where the stream ends.
 
         end_ns: UTC of the moment behind the last sample, ns since 1970.
     """
 
-    samples: NDArray[np.float64]
-    ahead: NDArray[np.float64]
+    samples: Signal
+    ahead: Signal
     end_ns: int
 
 
@@ -44,23 +47,14 @@ class Framer:
         ahead_s: a frame is given out when so much more has come in, and shows it.
 
         channels: which rows of the blocks to take.
-
-        gain: (channels,) m/s² for one unit of a sample.
     """
 
-    def __init__(
-        self,
-        rate_hz: float,
-        frame_s: float,
-        ahead_s: float,
-        channels: NDArray[np.intp],
-        gain: NDArray[np.float64],
-    ) -> None:
+    def __init__(self, rate_hz: float, frame_s: float, ahead_s: float, channels: NDArray[np.intp]) -> None:
         self._rate_hz = rate_hz
         self._frame_s = frame_s
         self._ahead = round(ahead_s * rate_hz)
-        self._channels = channels
-        self._gain = gain[:, None]
+        self._channels = _as_slice(channels)
+        self._count = len(channels)
         self._pieces: deque[Samples] = deque()
         self._used = 0  # samples of the first piece that lie before the frame
         self._held = 0  # samples from the frame's start on
@@ -115,11 +109,13 @@ class Framer:
 
     def _cut(self, ahead: int) -> Frame:
         length = self._length()
-        signal = np.empty((len(self._channels), length + ahead))
+        # 16 bits fit a float32 whole, converter counts of more do not.
+        narrow = self._pieces[0].dtype in (np.dtype(np.float32), np.dtype(np.int16))
+        signal = np.empty((self._count, length + ahead), np.float32 if narrow else np.float64)
         filled, skip = 0, self._used
         for piece in self._pieces:
             part = piece[self._channels, skip : skip + length + ahead - filled]
-            np.multiply(part, self._gain, out=signal[:, filled : filled + part.shape[1]])
+            signal[:, filled : filled + part.shape[1]] = part
             filled += part.shape[1]
             skip = 0
             if filled == length + ahead:
@@ -131,3 +127,9 @@ class Framer:
         self._taken += length
         self._index += 1
         return Frame(signal[:, :length], signal[:, length:], self._anchor_ns + self._elapsed_ns(self._taken))
+
+
+def _as_slice(channels: NDArray[np.intp]) -> NDArray[np.intp] | slice:
+    """Return neighbouring channels as a slice, which is copied once less."""
+    first, count = int(channels[0]), len(channels)
+    return slice(first, first + count) if np.array_equal(channels, np.arange(first, first + count)) else channels

@@ -57,11 +57,11 @@ class FrameGroup:
         gain = np.array([point.gain for point in points])
         channels = np.array([point.channel for point in points], dtype=np.intp)
         rail = np.nan if full_scale is None else full_scale
-        self._framer = Framer(rate_hz, frame_s, ahead_s, channels, gain)
-        self._check = SensorCheck(rate_hz, np.abs(gain) * rail)
+        self._framer = Framer(rate_hz, frame_s, ahead_s, channels)
+        self._check = SensorCheck(rate_hz, np.full(len(points), rail))
         self._steps = StepSearch(rate_hz, frame_s, lower_hz, len(points))
         self._chains = [
-            _Chain(Overall(band, rate_hz, frame_s, len(rows)), np.array(rows, dtype=np.intp))
+            _Chain(Overall(band, rate_hz, frame_s, gain[rows]), np.array(rows, dtype=np.intp))
             for band, rows in bands.items()
         ]
         # Channels whose filters begin with the next frame.

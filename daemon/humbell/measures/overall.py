@@ -5,6 +5,7 @@ from numpy.typing import NDArray
 
 from humbell.measures.bandpass import Bandpass
 from humbell.measures.fitting import fit
+from humbell.measures.framing import Signal
 from humbell.measures.response import Band, Quantity, settling_s, step_rms
 from humbell.model import STANDARD_GRAVITY, Measure
 
@@ -31,52 +32,59 @@ class Overall:
 
         frame_s: seconds of signal in a frame.
 
-        channels: number of channels.
+        gain: (channels,) m/s² for one unit of a sample.
     """
 
-    def __init__(self, band: Band, rate_hz: float, frame_s: float, channels: int) -> None:
+    def __init__(self, band: Band, rate_hz: float, frame_s: float, gain: NDArray[np.float64]) -> None:
         self.band = band
+        self._gain = np.abs(gain)
         self._frame_s = frame_s
-        self._filter = Bandpass(fit(band, rate_hz), channels)
+        self._filter = Bandpass(fit(band, rate_hz), len(gain))
         self._settling_s = settling_s(band)
         self._step_rms = step_rms(band, frame_s)
-        self._unsettled_s = np.zeros(channels)
+        self._unsettled_s = np.zeros(len(gain))
 
     def restart(self, channels: NDArray[np.intp], first: NDArray[np.float64]) -> None:
-        """Start some channels, (k,) indices, in the steady state of their first sample, (k,) m/s²."""
+        """Start some channels, (k,) indices, in the steady state of their first sample, (k,)."""
         self._filter.restart(channels, first)
         self._unsettled_s[channels] = self._settling_s
 
-    def feed(self, samples: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    def feed(self, samples: Signal) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
         """
-        Return what the next frame (channels, n) in m/s² measures, and whether it was settling still, (channels,).
+        Return what the next frame (channels, n) measures, and whether it was settling still, (channels,).
 
         The first is (measures, channels), in the order and units of `MEASURES`.
         """
         settling = self._unsettled_s > 0
         self._unsettled_s = np.maximum(self._unsettled_s - self._frame_s, 0)
         output = self._filter.feed(samples)
-        rms = np.sqrt(np.einsum("cn,cn->c", output, output) / output.shape[1])
-        peak = np.maximum(output.max(axis=1), -output.min(axis=1))
+        rms = np.sqrt(np.vecdot(output, output) / output.shape[1]) * self._gain
+        # The velocity's peak is not asked for.
+        peak = rms if self.band.quantity is Quantity.VELOCITY else _largest(output) * self._gain
         return values(self.band, rms, peak), settling
 
     def disturbed(
         self, rms: NDArray[np.float64], step: NDArray[np.float64], at_s: NDArray[np.float64]
     ) -> NDArray[np.float64]:
         """
-        Return the steps of the mean that have moved the last frame's RMS, (channels,); there the band settles anew.
+        Return the steps of the mean that have moved the last frame's RMS, (channels,) m/s²; the band settles anew.
 
         Args:
             rms: (channels,) of that frame, in the unit of the reading.
 
-            step: (channels,) heights of the steps, m/s²; 0 for none.
+            step: (channels,) heights of the steps, in units of a sample; 0 for none.
 
             at_s: (channels,) where in the frame they are.
         """
-        moved = step * self._step_rms * SCALE[self.band.quantity] > _STEP_SHARE * rms
+        height = step * self._gain
+        moved = height * self._step_rms * SCALE[self.band.quantity] > _STEP_SHARE * rms
         left_s = np.where(moved, at_s + self._settling_s - self._frame_s, 0)
         self._unsettled_s = np.maximum(self._unsettled_s, left_s)
-        return np.where(moved, step, 0)
+        return np.where(moved, height, 0)
+
+
+def _largest(output: NDArray[np.float64]) -> NDArray[np.float64]:
+    return np.asarray(np.maximum(output.max(axis=1), -output.min(axis=1)))
 
 
 def values(band: Band, rms: NDArray[np.float64], peak: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -3,6 +3,8 @@
 import numpy as np
 from numpy.typing import NDArray
 
+from humbell.measures.framing import Signal
+
 # Converters differ by a few counts in what they call full scale.
 _RAIL = 0.9995
 # The same extreme to the last bit, so often and so much more often than the value next to it, is a rail ...
@@ -29,9 +31,9 @@ class Rails:
 
     def count(
         self,
-        samples: NDArray[np.float64],
-        lowest: NDArray[np.float64],
-        highest: NDArray[np.float64],
+        samples: Signal,
+        lowest: Signal,
+        highest: Signal,
         alive: NDArray[np.bool_],
     ) -> NDArray[np.int_]:
         """
@@ -65,7 +67,7 @@ class _Extreme:
         self._next = -np.inf
         self._smallest_step = 0.0
 
-    def hits_in(self, samples: NDArray[np.float64], extreme: float) -> int:
+    def hits_in(self, samples: Signal, extreme: float) -> int:
         """Return how many of *samples* are at the rail; *extreme* is their largest value times the sign."""
         outermost = max(self._seen, default=-np.inf)
         if extreme < self._next or (extreme <= outermost and self._repeats()):
@@ -88,7 +90,7 @@ class _Extreme:
     def _repeats(self) -> bool:
         return len(self._seen) > 1 and self._seen[self._next] >= _HITS and not self._is_rail()
 
-    def _is_fine(self, samples: NDArray[np.float64]) -> bool:
+    def _is_fine(self, samples: Signal) -> bool:
         if not self._smallest_step:
             self._smallest_step = float(np.diff(np.unique(samples)).min())
         return float(np.ptp(samples)) >= _STEPS * self._smallest_step

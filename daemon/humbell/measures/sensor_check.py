@@ -5,6 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from humbell.measures.framing import Signal
 from humbell.measures.rails import Rails
 
 # No working sensor and converter give the same number so long; 128 samples keep a coarse slow converter out of it.
@@ -41,15 +42,15 @@ class SensorCheck:
     Args:
         rate_hz: samples a second.
 
-        full_scale: (channels,) magnitude of the rail, m/s²; NaN where it is unknown.
+        full_scale: (channels,) magnitude of the rail, in units of a sample; NaN where it is unknown.
     """
 
     def __init__(self, rate_hz: float, full_scale: NDArray[np.float64]) -> None:
         self._rails = Rails(full_scale)
         self._flat_window = max(round(_FLAT_S * rate_hz), _FLAT_SAMPLES)
 
-    def judge(self, samples: NDArray[np.float64]) -> Findings:
-        """Return what is wrong with each channel of *samples* (channels, n), m/s²."""
+    def judge(self, samples: Signal) -> Findings:
+        """Return what is wrong with each channel of *samples* (channels, n)."""
         starts = np.arange(0, max(samples.shape[1] - self._flat_window, 0) + 1, self._flat_window)
         highest = np.maximum.reduceat(samples, starts, axis=1)
         lowest = np.minimum.reduceat(samples, starts, axis=1)

@@ -3,7 +3,7 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from humbell.measures.framing import Frame
+from humbell.measures.framing import Frame, Signal
 
 # Windows on each side of a possible step, their parts, and how many frames tell what is usual.
 _PARTS = 20
@@ -48,7 +48,7 @@ class StepSearch:
 
     def find(self, frame: Frame, alive: NDArray[np.bool_]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """
-        Return height (m/s², 0 for none) and place (s from the frame's start) of the largest outstanding step.
+        Return height (units of a sample; 0: none) and place (s from the frame's start) of the largest step.
 
         Args:
             frame: with what follows it.
@@ -65,8 +65,8 @@ class StepSearch:
         self._before = inside[:, -half:] if self._parts >= half else means[:, -half - count :][:, :half]
         self._before = np.where(alive[:, None], self._before, np.nan)
 
-        windows = np.lib.stride_tricks.sliding_window_view(means, self._kernel.size, axis=1)
-        heights = np.abs(np.nan_to_num(windows @ self._kernel))
+        differences = [np.convolve(row, self._kernel, "valid") for row in means]
+        heights = np.abs(np.nan_to_num(differences))
         heights[~alive] = 0
         place = heights.argmax(axis=1)
         height = heights[np.arange(len(heights)), place]
@@ -99,9 +99,9 @@ def _step_kernel() -> NDArray[np.float64]:
     return np.convolve(np.concatenate([-box, box]), box)
 
 
-def _means(samples: NDArray[np.float64], edges: NDArray[np.int_]) -> NDArray[np.float64]:
+def _means(samples: Signal, edges: NDArray[np.int_]) -> NDArray[np.float64]:
     if edges.size <= 1:
         return np.zeros((len(samples), 0))
     with np.errstate(invalid="ignore"):  # infinities and no-numbers are found by the extremes
         sums = np.add.reduceat(samples[:, : edges[-1]], edges[:-1], axis=1)
-    return np.asarray(sums / np.diff(edges))
+    return np.asarray(sums / np.diff(edges), dtype=np.float64)
