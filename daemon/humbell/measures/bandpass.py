@@ -1,5 +1,7 @@
 """One band of many channels, filtered as a stream: decimator and sections with their state."""
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 from scipy import signal
@@ -59,7 +61,8 @@ class Bandpass:
         # the samples: a FIR has no memory in which the rounding of float32 could grow.
         rows, factor = self._rows.shape
         weights = self._rows.astype(samples.dtype)
-        joined: Signal = np.asarray(np.concatenate([self._tail, self._pending, samples], axis=1), dtype=samples.dtype)
+        parts: list[NDArray[Any]] = [self._tail, self._pending, samples]
+        joined = np.concatenate(parts, axis=1, dtype=samples.dtype)
         whole = joined.shape[1] // factor * factor
         self._pending = joined[:, whole:].copy()
         self._tail = joined[:, whole - self._tail.shape[1] : whole].copy()
