@@ -62,7 +62,7 @@ class Bandpass:
         rows, factor = self._rows.shape
         weights = self._rows.astype(samples.dtype)
         parts: list[NDArray[Any]] = [self._tail, self._pending, samples]
-        joined = np.concatenate(parts, axis=1, dtype=samples.dtype)
+        joined: NDArray[Any] = np.concatenate(parts, axis=1, dtype=samples.dtype)
         whole = joined.shape[1] // factor * factor
         self._pending = joined[:, whole:].copy()
         self._tail = joined[:, whole - self._tail.shape[1] : whole].copy()
