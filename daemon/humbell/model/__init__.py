@@ -6,6 +6,7 @@ from humbell.model.errors import ConfigError, HumbellError, InputError, OutOfRea
 from humbell.model.ids import ChannelId, Id, PointId
 from humbell.model.quality import GOOD, MAY_RAISE, Cause, Coverage, Quality, Verdict, coverage_of
 from humbell.model.reading import UNITS, Measure, Reading
+from humbell.model.secret import Secret
 from humbell.model.units import STANDARD_GRAVITY, SampleUnit, Unit
 
 __all__ = [
@@ -31,6 +32,7 @@ __all__ = [
     "Reading",
     "SampleUnit",
     "Samples",
+    "Secret",
     "Transition",
     "Unit",
     "Verdict",

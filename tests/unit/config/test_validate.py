@@ -8,11 +8,10 @@ from hypothesis import strategies as st
 from pydantic import BaseModel, ConfigDict, Discriminator, Field, RootModel, Tag, field_validator, model_validator
 from pydantic_core import PydanticCustomError
 
-from humbell.config.secrets import Secret
 from humbell.config.templates import apply_templates
 from humbell.config.tree import Tree, Value, read_tree
 from humbell.config.validate import validate
-from humbell.model import ConfigError, Id
+from humbell.model import ConfigError, Id, Secret
 
 
 class Settings(BaseModel):

@@ -11,7 +11,7 @@ from pydantic import GetCoreSchemaHandler, GetJsonSchemaHandler
 from pydantic.json_schema import JsonSchemaValue
 from pydantic_core import CoreSchema, core_schema
 
-from humbell.model import ConfigError
+from humbell.model.errors import ConfigError
 
 _FORMS = "${env:NAME}, ${file:/PATH} or ${credential:NAME}"
 # Names of variables: POSIX.1-2017, 8.1. Names of credentials are file names; a path in one would leave the directory.

@@ -5,8 +5,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 from pydantic import BaseModel, ConfigDict, TypeAdapter, ValidationError
 
-from humbell.config.secrets import Secret
 from humbell.model import ConfigError
+from humbell.model.secret import Secret
 
 ADVICE = "secrets stand outside this file (write ${env:NAME}, ${file:/PATH} or ${credential:NAME})"
 
