@@ -23,9 +23,9 @@ def reading_line(reading: Reading) -> str:
         machine=reading.machine,
         point=reading.point,
         measure=reading.measure,
-        value=_number(reading.value),
+        value=number(reading.value),
         unit=reading.unit,
-        span_s=_number(reading.span_s),
+        span_s=number(reading.span_s),
         quality=reading.quality,
         cause=reading.cause,
         detail=reading.detail,
@@ -43,15 +43,15 @@ def transition_line(transition: Transition) -> str:
         **{"from": transition.before},
         to=transition.after,
         verified=transition.verified,
-        value=_number(transition.value),
-        limit=_number(transition.limit),
+        value=number(transition.value),
+        limit=number(transition.limit),
         occurrence=transition.occurrence,
     )
 
 
 def coverage_line(point: PointId, seconds: Mapping[Coverage, float]) -> str:
     """Return the coverage of *point* as one line of JSON."""
-    found = {str(category): _number(value) for category, value in seconds.items()}
+    found = {str(category): number(value) for category, value in seconds.items()}
     return _line(kind="coverage", machine=point.machine, point=point.point, seconds=found)
 
 
@@ -59,6 +59,7 @@ def _line(**fields: object) -> str:
     return json.dumps(fields, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
 
 
-def _number(value: float) -> float | None:
+def number(value: float) -> float | None:
+    """Return *value* as it is printed; None where there is none."""
     # Six digits are more than any sensor gives, and hide the last bits that depend on the processor.
     return float(f"{value:.6g}") if math.isfinite(value) else None

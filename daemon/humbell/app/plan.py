@@ -132,7 +132,7 @@ def _point_line(site: Site, name: PointId, point: Point) -> PointLine:
     return PointLine(
         name=name,
         channel=str(point.channel),
-        rate_hz=site.sources[point.channel.source].rate_hz,
+        rate_hz=getattr(site.sources[point.channel.source], "rate_hz", None),
         sensitivity=_sensitivity(point),
         mount=point.mount,
         bearing=point.bearing.multiples if point.bearing else {},

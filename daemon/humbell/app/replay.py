@@ -4,7 +4,8 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from humbell.app.chain import Chain, SignalKind
+from humbell.app.chain import Chain
+from humbell.app.line import SignalKind
 from humbell.app.tally import Tally
 from humbell.app.wiring import node_id, occurrence_names, points_of
 from humbell.config import Site

@@ -5,10 +5,12 @@ from collections.abc import Iterator
 from dataclasses import asdict
 from pathlib import Path
 
+from pydantic import BaseModel
+
 from humbell.app.identity import read_serial
 from humbell.app.plan import CAUTIONS, BandLine, Plan, PointLine, plan
 from humbell.app.wiring import node_id
-from humbell.config import Loaded, Machine, load
+from humbell.config import Loaded, Machine, load, plugins
 
 
 def run(config: Path, *, as_json: bool) -> None:
@@ -51,10 +53,8 @@ def _text(loaded: Loaded, found: Plan) -> Iterator[str]:
     yield f"{loaded.path}, SHA-256 {loaded.digest[:16]}…"
     yield ""
     for name, settings in site.sources.items():
-        rate = f"{settings.rate_hz:g} Hz" if settings.rate_hz else "rate from the file"
-        unit = settings.unit or "unit from the file"
-        rail = f", full scale {settings.full_scale:g} {settings.unit or ''}" if settings.full_scale else ""
-        yield f"source {name}: {settings.kind}, {rate}, {unit}{rail}"
+        yield _source(name, settings)
+    yield from (f"source plug-in {where} cannot be used: {why}" for where, why in plugins()[1].items())
     points = iter(found.points)
     for machine, chosen in site.machines.items():
         yield ""
@@ -66,6 +66,16 @@ def _text(loaded: Loaded, found: Plan) -> Iterator[str]:
     yield from _section("Not watched:", found.not_watched)
     yield from _section("To think about:", found.proposals)
     yield from _section("Cautions:", CAUTIONS)
+
+
+def _source(name: str, settings: BaseModel) -> str:
+    said = settings.model_dump(mode="json", exclude_none=True)
+    if said["kind"] == "replay":
+        rate = f"{said['rate_hz']:g} Hz" if "rate_hz" in said else "rate from the file"
+        unit = said.get("unit", "unit from the file")
+        rail = f", full scale {said['full_scale']:g} {said.get('unit', '')}".rstrip() if "full_scale" in said else ""
+        return f"source {name}: replay, {rate}, {unit}{rail}"
+    return f"source {name}: {', '.join(str(v) if k == 'kind' else f'{k} {v}' for k, v in said.items())}"
 
 
 def _machine(name: str, chosen: Machine) -> str:

@@ -12,7 +12,7 @@ from typing import Annotated
 import typer
 
 from humbell import __version__
-from humbell.model.errors import ConfigError, InputError, OutOfReachError
+from humbell.model.errors import ConfigError, HumbellError, OutOfReachError
 
 EXIT_WRONG_USE = 2
 EXIT_OUT_OF_REACH = 3
@@ -52,19 +52,19 @@ def _common(
 @app.command()
 def check(config: Config, json: AsJson = False) -> None:
     """Read a configuration, and print what would be watched, by which limits, and what would not."""
-    from humbell.cli.check import run  # noqa: PLC0415 - a command is imported when it is called
+    from humbell.cli.check import run as run_  # noqa: PLC0415 - a command is imported when it is called
 
     with _printing():
-        run(config, as_json=json)
+        run_(config, as_json=json)
 
 
 @app.command()
 def schema() -> None:
     """Print the JSON Schema of the configuration, for editors."""
-    from humbell.cli.schema import run  # noqa: PLC0415 - a command is imported when it is called
+    from humbell.cli.schema import run as run_  # noqa: PLC0415 - a command is imported when it is called
 
     with _printing():
-        run()
+        run_()
 
 
 @app.command()
@@ -93,10 +93,10 @@ def replay(
     json: AsJson = False,
 ) -> None:
     """Run recorded files through the same chain as live signals, as fast as they are read."""
-    from humbell.cli.replay import run  # noqa: PLC0415 - a command is imported when it is called
+    from humbell.cli.replay import run as run_  # noqa: PLC0415 - a command is imported when it is called
 
     with _printing():
-        run(config, files, point or [], start, piece_every, as_json=json)
+        run_(config, files, point or [], start, piece_every, as_json=json)
 
 
 class _ReadEnoughError(Exception):
@@ -124,6 +124,99 @@ def _drop_output() -> None:
     os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
+@app.command()
+def run(config: Config) -> None:
+    """Watch: read the sources, measure, judge, and write the journal, until told to stop."""
+    from humbell.cli.run import run as run_  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = run_(config)
+    raise typer.Exit(code)
+
+
+@app.command()
+def status(config: Config, json: AsJson = False) -> None:
+    """Print how the running service is doing: sources, points, queues, journal."""
+    from humbell.cli.status import run as run_  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = run_(config, as_json=json)
+    raise typer.Exit(code)
+
+
+alarms_app = typer.Typer(help="Alarms: what stands, what was, and what to acknowledge.", no_args_is_help=True)
+app.add_typer(alarms_app, name="alarms")
+
+
+@alarms_app.command("list")
+def alarms_list(config: Config, json: AsJson = False) -> None:
+    """Print every alarm that is not plainly normal; exit code 1 where one is."""
+    from humbell.cli.alarms import run as run_  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = run_(config, as_json=json)
+    raise typer.Exit(code)
+
+
+@alarms_app.command("history")
+def alarms_history(
+    config: Config,
+    limit: Annotated[int, typer.Option(min=1, help="How many transitions.")] = 100,
+    json: AsJson = False,
+) -> None:
+    """Print the last transitions, oldest first."""
+    from humbell.cli.alarms import history  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = history(config, limit, as_json=json)
+    raise typer.Exit(code)
+
+
+@alarms_app.command("acknowledge")
+def alarms_acknowledge(
+    config: Config,
+    alarm: Annotated[str, typer.Argument(metavar="MACHINE/POINT/ALARM", help="Such as p-101/de-h/velocity_rms.high.")],
+    note: Annotated[str, typer.Option(help="Why, or what is being done.")] = "",
+    json: AsJson = False,
+) -> None:
+    """Acknowledge an alarm, in your name."""
+    from humbell.cli.alarms import acknowledge  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = acknowledge(config, alarm, note, as_json=json)
+    raise typer.Exit(code)
+
+
+From = Annotated[str | None, typer.Option("--from", metavar="TIME", help="Begin, with a zone: 2026-03-01T10:00:00Z.")]
+To = Annotated[str | None, typer.Option("--to", metavar="TIME", help="End, with a zone.")]
+
+
+@app.command()
+def coverage(config: Config, start: From = None, end: To = None, json: AsJson = False) -> None:
+    """Print what the committed seconds of each point were: measured, or why not."""
+    from humbell.cli.coverage import run as run_  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = run_(config, start, end, as_json=json)
+    raise typer.Exit(code)
+
+
+@app.command()
+def export(
+    config: Config,
+    start: From = None,
+    end: To = None,
+    point: Annotated[str | None, typer.Option(metavar="MACHINE/POINT", help="Of one point only.")] = None,
+    json: AsJson = False,
+) -> None:
+    """Print the readings in the journal as CSV, or as JSON lines."""
+    from humbell.cli.export import run as run_  # noqa: PLC0415 - a command is imported when it is called
+
+    with _printing():
+        code = run_(config, start, end, point, as_json=json)
+    raise typer.Exit(code)
+
+
 def main() -> None:
     """Run the command line; every error that the user can mend is one line each, without a traceback."""
     # More threads only get in each other's way on a small computer that does other things. Before NumPy is imported.
@@ -135,7 +228,7 @@ def main() -> None:
         app()
     except ConfigError as error:
         _complain(error, EXIT_WRONG_USE)
-    except (InputError, OutOfReachError) as error:
+    except HumbellError as error:
         _complain(error, EXIT_OUT_OF_REACH)
     except _ReadEnoughError:
         sys.exit(0)

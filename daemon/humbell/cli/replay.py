@@ -3,7 +3,6 @@
 import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
-from datetime import datetime
 from pathlib import Path
 
 from rich.console import Console
@@ -12,6 +11,7 @@ from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from humbell.app.identity import read_serial
 from humbell.app.jsonlines import coverage_line, reading_line, transition_line
 from humbell.app.replay import Replay, ReplayRequest
+from humbell.cli.ask import time_ns
 from humbell.cli.summary import Summary
 from humbell.config import load
 from humbell.model import ChannelId, ConfigError, PointId, Reading
@@ -36,7 +36,7 @@ def run(
     """
     loaded = load(config)
     channels = dict(_point(text) for text in points)
-    request = ReplayRequest(files, channels, None if start is None else _start_ns(start), piece_every_s)
+    request = ReplayRequest(files, channels, None if start is None else time_ns("--start", start), piece_every_s)
     replay = Replay(loaded.site, request, read_serial)
     summary = Summary(replay.site)
     with _progress(replay.seconds) as progress:
@@ -65,17 +65,6 @@ def _point(text: str) -> tuple[PointId, ChannelId]:
         return PointId(machine, point), ChannelId.parse(channel)
     except ValueError as error:
         raise ConfigError(f"--point {text}: {error}") from None
-
-
-def _start_ns(text: str) -> int:
-    try:
-        start = datetime.fromisoformat(text)
-    except ValueError:
-        raise ConfigError(f"--start {text}: is no time (give one such as 2026-03-01T10:00:00Z)") from None
-    if start.tzinfo is None:
-        raise ConfigError(f"--start {text}: has no zone (add Z for UTC, or an offset such as +01:00)")
-    seconds = int(start.replace(microsecond=0).timestamp())
-    return (seconds * 1_000_000 + start.microsecond) * 1000
 
 
 @contextmanager

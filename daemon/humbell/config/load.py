@@ -5,17 +5,19 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
-from pydantic import ValidationError
+from pydantic import TypeAdapter, ValidationError
 
 from humbell.config.messages import Path as Place
 from humbell.config.messages import known, problem
+from humbell.config.plugins import SourceSettings
 from humbell.config.site import Acceleration, Site, Velocity
 from humbell.config.templates import apply_templates
 from humbell.config.tree import Tree, TreeError, Value, read_tree
 from humbell.config.validate import validate
 from humbell.measures import Quantity, band_problem
 from humbell.model import ChannelId, ConfigError
-from humbell.sources import ReplaySettings
+
+_SOURCE = TypeAdapter(SourceSettings)
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,11 +31,14 @@ class Loaded:
         path: its file.
 
         digest: SHA-256 of the file, in hexadecimal; every stored thing knows under which configuration it was made.
+
+        text: of the file.
     """
 
     site: Site
     path: Path
     digest: str
+    text: str
 
 
 def load(path: Path) -> Loaded:
@@ -54,7 +59,7 @@ def load(path: Path) -> Loaded:
     except UnicodeDecodeError as error:
         line = content[: error.start].count(b"\n") + 1
         raise ConfigError(f"{path}:{line}: is no UTF-8 text (save it as UTF-8)") from None
-    return Loaded(parse(text, str(path)), path, hashlib.sha256(content).hexdigest())
+    return Loaded(parse(text, str(path)), path, hashlib.sha256(content).hexdigest(), text)
 
 
 def parse(text: str, name: str) -> Site:
@@ -137,7 +142,7 @@ def _wrong_rates(tree: Tree) -> Iterator[tuple[Place, str]]:
     sources = tree.data.get("sources")
     for path, chosen, channel in _points(tree):
         try:
-            source = ReplaySettings.model_validate(sources.get(channel.source) if isinstance(sources, dict) else None)
+            source = _SOURCE.validate_python(sources.get(channel.source) if isinstance(sources, dict) else None)
         except ValidationError:
             continue
         for quantity, model in ((Quantity.VELOCITY, Velocity), (Quantity.ACCELERATION, Acceleration)):
@@ -145,6 +150,7 @@ def _wrong_rates(tree: Tree) -> Iterator[tuple[Place, str]]:
                 band = model.model_validate(chosen.get(quantity.value, {})).band(quantity)
             except ValidationError:  # another fault, or a band that is not measured
                 continue
-            said = band_problem(band, source.rate_hz) if source.rate_hz is not None else None
+            rate_hz = getattr(source, "rate_hz", None)
+            said = band_problem(band, rate_hz) if rate_hz is not None else None
             if said:
                 yield (*path, quantity.value, "band_hz"), said

@@ -6,9 +6,11 @@ from typing import Annotated, Literal
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
 
 from humbell.alarms import LimitSettings
+from humbell.config.plugins import SourceSettings
+from humbell.journal import JournalSettings
 from humbell.measures import AccelerationBand, VelocityBand
 from humbell.model import ChannelId, Id
-from humbell.sources import ReplaySettings, Sensitivity
+from humbell.sources import Sensitivity
 
 
 def _off(value: object) -> object:
@@ -123,5 +125,8 @@ class Site(_Settings):
 
     site: Annotated[Id, Field(description="id of the plant")]
     node: Annotated[Id | None, Field(description="id of this computer; default: from its serial number")] = None
-    sources: Annotated[dict[Id, ReplaySettings], Field(min_length=1, description="what delivers samples, by id")]
+    journal: Annotated[JournalSettings, Field(description="where everything is written to first")] = Field(
+        default_factory=JournalSettings
+    )
+    sources: Annotated[dict[Id, SourceSettings], Field(min_length=1, description="what delivers samples, by id")]
     machines: Annotated[dict[Id, Machine], Field(min_length=1, description="what is watched, by id")]

@@ -85,8 +85,8 @@ def _decimator(factor: int, rate_hz: float, upper_hz: float) -> NDArray[np.float
     taps, beta = signal.kaiserord(_FOLDED_DB, (stop_hz - upper_hz) / (rate_hz / 2))
     taps = -(-taps // factor) * factor
     fir = signal.firwin(taps, (stop_hz + upper_hz) / 2, window=("kaiser", beta), fs=rate_hz)
-    # Minimum phase keeps the two overalls of one frame within a millisecond of each other. Its cepstrum folds over where
-    # the transform is not many times longer than the filter.
+    # Minimum phase keeps the two overalls of one frame within a millisecond of each other. Its cepstrum folds over
+    # where the transform is not many times longer than the filter.
     fir = signal.minimum_phase(fir, half=False, n_fft=max(1 << 14, 1 << (8 * taps).bit_length()))
     return np.asarray(fir / fir.sum())
 

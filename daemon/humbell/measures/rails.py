@@ -1,5 +1,7 @@
 """Finds samples at a converter's rail: a known one, or one that the signal itself gives away."""
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -7,19 +9,26 @@ from humbell.measures.framing import Signal
 
 # Converters differ by a few counts in what they call full scale.
 _RAIL = 0.9995
-# The same extreme to the last bit, so often and so much more often than the value next to it, is a rail ...
-_HITS, _HITS_OVER_NEXT = 3, 2
-# ... unless the converter's steps are so coarse that extremes repeat by chance: it must resolve the signal this finely.
+# The same extreme, so often and so much more often than others, is a rail. The others are the next value, which a
+# signal that repeats itself repeats as well, ...
+_HITS, _HITS_OVER_OTHERS = 3, 2
+# ... and all values that come this near, in shares of the signal's span: the top of a wave is round.
+_NEAR = 1e-3
+# Where a converter's steps are so coarse that extremes repeat by chance, nothing is learnt: it must resolve the signal
+# this finely.
 _STEPS = 2000
+# Values are compared on a grid of this share of the first frame's span: fine enough for the steps of 24 bits, too
+# coarse for the last bits of computed values, which differ by chance.
+_GRID = 2.0**-26
 
 
 class Rails:
     """
     Counts the clipped samples of each channel, frame after frame.
 
-    Without a known full scale, a rail shows by isolated or chained samples of one same extreme value, while no other
-    value repeats. A signal that repeats itself as a whole (a computed sine, a record played in a loop) repeats its
-    other values as well, and is not taken for clipped. The first two hits pass unseen.
+    Without a known full scale, a rail shows by isolated or chained samples of one same extreme value, while other
+    values do not repeat and hardly any come near. A signal that repeats itself as a whole (a computed sine, a record
+    played in a loop) is not taken for clipped. The first two hits pass unseen.
 
     Args:
         full_scale: (channels,) magnitude of the rail in the unit of the samples; NaN where it is unknown.
@@ -54,43 +63,65 @@ class Rails:
             clipped[c] = np.count_nonzero(np.abs(samples[c]) >= self._full_scale[c])
         for c, upper, lower in self._learning:
             if alive[c]:
-                clipped[c] = upper.hits_in(samples[c], highest[c]) + lower.hits_in(samples[c], -lowest[c])
+                span = float(highest[c]) - float(lowest[c])
+                clipped[c] = upper.hits_in(samples[c], highest[c], span) + lower.hits_in(samples[c], -lowest[c], span)
         return clipped
 
 
 class _Extreme:
-    """The two outermost values of one side of one channel, and how often each was seen."""
+    """The two outermost values of one side of one channel, how often each was seen, and how much came near them."""
 
     def __init__(self, sign: int) -> None:
         self._sign = sign
         self._seen: dict[float, int] = {}
         self._next = -np.inf
+        self._near = 0
+        self._grid = 0.0
         self._smallest_step = 0.0
 
-    def hits_in(self, samples: Signal, extreme: float) -> int:
-        """Return how many of *samples* are at the rail; *extreme* is their largest value times the sign."""
+    def hits_in(self, samples: Signal, extreme: float, span: float) -> int:
+        """
+        Return how many samples are at the rail.
+
+        Args:
+            samples: (n,), one frame.
+
+            extreme: their largest value times the sign.
+
+            span: their largest value less their smallest, above 0.
+        """
+        self._grid = self._grid or math.ldexp(_GRID, math.frexp(span)[1])
+        extreme = round(extreme / self._grid)
         outermost = max(self._seen, default=-np.inf)
-        if extreme < self._next or (extreme <= outermost and self._repeats()):
+        if extreme < self._next or (extreme <= outermost and self._learnt()):
             return 0
-        value = self._sign * samples
+        value = np.round(samples.astype(np.float64) * (self._sign / self._grid))
         following = float(np.max(value, where=value < extreme, initial=-np.inf))
         here = int(np.count_nonzero(value == extreme))
+        top, reach = max(extreme, outermost), _NEAR * span / self._grid
+        if extreme > outermost:
+            self._near = self._near + self._seen[outermost] if extreme - outermost < reach else 0
+        self._near += int(np.count_nonzero((value >= top - reach) & (value < top)))
         for level, count in ((extreme, here), (following, int(np.count_nonzero(value == following)))):
             self._seen[level] = self._seen.get(level, 0) + count
         self._seen = dict(sorted(self._seen.items(), reverse=True)[:2])
         self._next = min(self._seen)
-        if extreme < max(self._seen) or not self._is_rail() or not self._is_fine(samples):
+        if extreme < top or not self._is_rail() or not self._is_fine(value):
             return 0
         return here
 
     def _is_rail(self) -> bool:
-        hits, following = self._seen[max(self._seen)], self._seen[self._next]
-        return hits >= _HITS and hits > _HITS_OVER_NEXT * following
+        hits = self._seen[max(self._seen)]
+        return hits >= _HITS and hits > _HITS_OVER_OTHERS * self._others()
 
-    def _repeats(self) -> bool:
-        return len(self._seen) > 1 and self._seen[self._next] >= _HITS and not self._is_rail()
+    def _learnt(self) -> bool:
+        return self._others() >= _HITS and not self._is_rail()
 
-    def _is_fine(self, samples: Signal) -> bool:
+    def _others(self) -> int:
+        return max(self._near, self._seen[self._next]) if len(self._seen) > 1 else self._near
+
+    def _is_fine(self, value: NDArray[np.float64]) -> bool:
         if not self._smallest_step:
-            self._smallest_step = float(np.diff(np.unique(samples)).min())
-        return float(np.ptp(samples)) >= _STEPS * self._smallest_step
+            steps = np.diff(np.unique(value))
+            self._smallest_step = float(steps.min()) if steps.size else 0.0
+        return float(np.ptp(value)) >= _STEPS * self._smallest_step

@@ -47,15 +47,25 @@ class SensorCheck:
 
     def __init__(self, rate_hz: float, full_scale: NDArray[np.float64]) -> None:
         self._rails = Rails(full_scale)
-        self._flat_window = max(round(_FLAT_S * rate_hz), _FLAT_SAMPLES)
+        self._flat_samples = max(round(_FLAT_S * rate_hz), _FLAT_SAMPLES)
 
     def judge(self, samples: Signal) -> Findings:
         """Return what is wrong with each channel of *samples* (channels, n)."""
-        starts = np.arange(0, max(samples.shape[1] - self._flat_window, 0) + 1, self._flat_window)
+        # Wherever so many equal samples begin, one whole window of half their number lies among them.
+        window, length = self._flat_samples // 2, samples.shape[1]
+        starts = np.arange(0, length, window)
         highest = np.maximum.reduceat(samples, starts, axis=1)
         lowest = np.minimum.reduceat(samples, starts, axis=1)
         non_finite = np.asarray(~(np.isfinite(highest) & np.isfinite(lowest)).all(axis=1))
-        flat = np.asarray((highest == lowest).any(axis=1) & ~non_finite)
+        still = (highest == lowest)[:, : max(length // window, 1)].any(axis=1) & ~non_finite
+        flat = np.zeros(len(samples), dtype=bool)
+        for c in np.flatnonzero(still):
+            flat[c] = _longest_run(samples[c]) >= min(self._flat_samples, length)
         alive = ~(non_finite | flat)
         clipped = self._rails.count(samples, lowest.min(axis=1), highest.max(axis=1), alive)
         return Findings(non_finite, flat, clipped)
+
+
+def _longest_run(samples: Signal) -> int:
+    changes = np.flatnonzero(np.diff(samples)) + 1
+    return int(np.diff(np.concatenate([[0], changes, [samples.size]])).max())

@@ -29,9 +29,9 @@ class StepSearch:
     """
 
     def __init__(self, rate_hz: float, frame_s: float, lower_hz: float, channels: int) -> None:
-        # One part: 1/20 of the period, and never less than one sample.
-        self._part_s = max(1 / (lower_hz * _PARTS), 1 / rate_hz)
-        self._parts = round(frame_s / self._part_s)
+        # One part: 1/20 of the period, and never less than one sample of the shortest frame.
+        self._parts = max(1, min(round(frame_s * lower_hz * _PARTS), int(frame_s * rate_hz)))
+        self._part_s = frame_s / self._parts
         self._kernel = _step_kernel()
         self._before = np.full((channels, self._kernel.size // 2), np.nan)
         self._usual = np.full((_HISTORY, channels), np.nan)
@@ -102,6 +102,7 @@ def _step_kernel() -> NDArray[np.float64]:
 def _means(samples: Signal, edges: NDArray[np.int_]) -> NDArray[np.float64]:
     if edges.size <= 1:
         return np.zeros((len(samples), 0))
-    with np.errstate(invalid="ignore"):  # infinities and no-numbers are found by the extremes
+    with np.errstate(invalid="ignore", over="ignore"):  # infinities and no-numbers are found by the extremes
         sums = np.add.reduceat(samples[:, : edges[-1]], edges[:-1], axis=1)
-    return np.asarray(sums / np.diff(edges), dtype=np.float64)
+    # The frame before an infinite sample sees it ahead, and must not take it for a step.
+    return np.where(np.isfinite(sums), sums / np.diff(edges), np.nan)

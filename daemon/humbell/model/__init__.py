@@ -2,8 +2,10 @@
 
 from humbell.model.alarm import AlarmId, AlarmType, LifeCycle, Transition
 from humbell.model.block import Block, Samples
-from humbell.model.errors import ConfigError, HumbellError, InputError, OutOfReachError
+from humbell.model.command import Action, Command
+from humbell.model.errors import ConfigError, EndOfSource, HumbellError, InputError, OutOfReachError
 from humbell.model.ids import ChannelId, Id, PointId
+from humbell.model.moment import Moment
 from humbell.model.quality import GOOD, MAY_RAISE, Cause, Coverage, Quality, Verdict, coverage_of
 from humbell.model.reading import UNITS, Measure, Reading
 from humbell.model.secret import Secret
@@ -14,18 +16,22 @@ __all__ = [
     "MAY_RAISE",
     "STANDARD_GRAVITY",
     "UNITS",
+    "Action",
     "AlarmId",
     "AlarmType",
     "Block",
     "Cause",
     "ChannelId",
+    "Command",
     "ConfigError",
     "Coverage",
+    "EndOfSource",
     "HumbellError",
     "Id",
     "InputError",
     "LifeCycle",
     "Measure",
+    "Moment",
     "OutOfReachError",
     "PointId",
     "Quality",

@@ -24,3 +24,7 @@ class InputError(HumbellError):
 
 class OutOfReachError(HumbellError):
     """A part that is needed (a file, a device, a server) is not there just now."""
+
+
+class EndOfSource(Exception):  # noqa: N818 - an end, not an error
+    """All that a source has to give has been read; what never ends by itself, such as a device, never raises it."""

@@ -23,6 +23,7 @@ class Cause(StrEnum):
     DC_STEP = "dc_step"
     SETTLING = "settling"
     SHORT_PIECE = "short_piece"
+    DAEMON_DOWN = "daemon_down"
 
 
 class Coverage(StrEnum):
@@ -65,6 +66,7 @@ GOOD = Verdict(Quality.GOOD)
 MAY_RAISE = frozenset({Cause.CLIPPED, Cause.SHORT_PIECE})
 
 _COVERAGE = {
+    Cause.DAEMON_DOWN: Coverage.DAEMON_DOWN,
     Cause.NO_SAMPLES: Coverage.NO_SAMPLES,
     Cause.INCOMPLETE: Coverage.NO_SAMPLES,
     Cause.NON_FINITE: Coverage.SENSOR_FAULT,

@@ -1,0 +1,255 @@
+"""The one writer of the journal: what is told at once, what in chunks, and what a restart finds."""
+
+import sqlite3
+from collections import defaultdict
+from collections.abc import Callable, Collection, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from humbell.alarms import AlarmState
+from humbell.journal import alarms, audit, coverage, feed, retention
+from humbell.journal.audit import Deed
+from humbell.journal.chunks import QUALITIES, Chunk, chunk_id, pack
+from humbell.journal.db import open_for_writing
+from humbell.journal.feed import Kind
+from humbell.journal.settings import JournalSettings
+from humbell.model import AlarmId, Measure, Moment, PointId, Reading, Transition
+
+_HOUR_NS = 3600 * 10**9
+
+
+@dataclass(frozen=True, slots=True)
+class Watched:
+    """
+    What the journal has to know of the configuration.
+
+    Args:
+        digest: SHA-256 of the configuration.
+
+        content: its text.
+
+        counted: the measure whose readings count for the coverage of each point.
+
+        judged: what has a limit.
+
+        kept: of which measures the single values are kept, not only the summary of each commit.
+    """
+
+    digest: str
+    content: str
+    counted: Mapping[PointId, Measure]
+    judged: Collection[tuple[PointId, Measure]]
+    kept: Collection[Measure]
+
+
+@dataclass(frozen=True, slots=True)
+class Resumed:
+    """
+    What was found in a journal when it was opened.
+
+    Args:
+        states: the last committed state of every alarm.
+
+        ends_ns: UTC up to which the readings of each point are committed.
+
+        put_aside: where a damaged journal was put; None where there was none.
+    """
+
+    states: Mapping[AlarmId, AlarmState] = field(default_factory=dict)
+    ends_ns: Mapping[PointId, int] = field(default_factory=dict)
+    put_aside: Path | None = None
+
+
+class Journal:
+    """
+    Writes to the journal. Belongs to one thread.
+
+    Transitions and deeds are committed at once; readings when `commit` is called, in one transaction with the coverage
+    and the alarms' timers. What was not committed counts as a gap after a restart.
+
+    Args:
+        settings: where and how.
+
+        watched: what to keep of it.
+
+        now: the moment, by both clocks.
+    """
+
+    def __init__(self, settings: JournalSettings, watched: Watched, now: Callable[[], Moment]) -> None:
+        self.settings = settings
+        self._watched = watched
+        self._now = now
+        self._connection: sqlite3.Connection | None = None
+        self._points: dict[PointId, int] = {}
+        self._series: dict[tuple[PointId, Measure], int] = {}
+        self._readings: list[Reading] = []
+        self.commits = 0
+        self.last_commit: Moment | None = None
+
+    def open(self) -> Resumed:
+        """
+        Open the file, put a damaged one aside, and return what a restart goes on from.
+
+        Raises:
+            JournalError: there can be no journal there.
+        """
+        self._connection, aside = open_for_writing(self.settings.path)
+        now = self._now()
+        with _Transaction(self._connection) as db:
+            db.execute("INSERT INTO boot VALUES (?, ?, ?, ?)", (now.boot, now.mono_ns, now.utc_ns, now.clock_known))
+            db.execute(
+                "INSERT INTO configuration VALUES (?, ?, ?) ON CONFLICT DO NOTHING",
+                (self._watched.digest, now.utc_ns, self._watched.content),
+            )
+        ends = self._connection.execute(
+            "SELECT p.machine, p.point, max(end_ns) e FROM chunk c "
+            "JOIN series s ON s.id = c.id % 4096 JOIN point p ON p.id = s.point GROUP BY p.id"
+        )
+        return Resumed(
+            states=alarms.states(self._connection),
+            ends_ns={PointId(row["machine"], row["point"]): row["e"] for row in ends},
+            put_aside=aside,
+        )
+
+    @property
+    def pending_s(self) -> float:
+        """Seconds of signal that wait for the next commit."""
+        if not self._readings:
+            return 0.0
+        return (self._readings[-1].time_ns - self._readings[0].time_ns) / 1e9 + self._readings[0].span_s
+
+    def add(self, reading: Reading) -> None:
+        """Keep *reading* for the next commit."""
+        self._readings.append(reading)
+
+    def tell(self, transition: Transition, state: AlarmState) -> int:
+        """
+        Commit *transition* and the *state* that it leads to; it counts from now on.
+
+        Raises:
+            sqlite3.Error: it could not be written; it does not count, and may be told again.
+        """
+        with _Transaction(self._open) as db:
+            seq = feed.append(db, Kind.TRANSITION, self._now(), self._watched.digest)
+            alarms.store(db, seq, transition, state)
+        self.commits += 1
+        return seq
+
+    def note(self, deed: Deed) -> int:
+        """
+        Commit *deed*.
+
+        Raises:
+            sqlite3.Error: it could not be written, so the deed must not be done.
+        """
+        with _Transaction(self._open) as db:
+            seq = feed.append(db, Kind.AUDIT, self._now(), self._watched.digest)
+            audit.store(db, seq, deed)
+        self.commits += 1
+        return seq
+
+    def commit(self, states: Mapping[AlarmId, AlarmState]) -> int:
+        """
+        Commit the readings that wait, their coverage and the alarms' *states*; return how many readings it were.
+
+        Raises:
+            sqlite3.Error: it could not be written; the readings go on waiting.
+        """
+        if not self._readings:
+            return 0
+        now = self._now()
+        groups: dict[tuple[PointId, Measure], list[Reading]] = defaultdict(list)
+        for reading in self._readings:
+            groups[PointId(reading.machine, reading.point), reading.measure].append(reading)
+        accounts = coverage.account(
+            self._readings, self._watched.counted, self._watched.judged, clock_known=now.clock_known
+        )
+        chunks = [pack(group, keep_values=key[1] in self._watched.kept) for key, group in groups.items()]
+        start_ns = min(chunk.start_ns for chunk in chunks)
+        with _Transaction(self._open) as db:
+            series = {key: self._series_number(db, *key) for key in groups}
+            numbers = {point: self._point_number(db, point) for point, _ in groups}
+            seq = feed.append(db, Kind.CHUNKS, now, self._watched.digest)
+            db.executemany(
+                "INSERT INTO chunk VALUES (?, ?, ?, ?, ?, ?, ?)",
+                [_row(chunk_id(seq, series[chunk.point, chunk.measure]), chunk) for chunk in chunks],
+            )
+            db.executemany(
+                "INSERT INTO chunk_values VALUES (?, ?)",
+                [(chunk_id(seq, series[c.point, c.measure]), c.readings) for c in chunks if c.readings is not None],
+            )
+            coverage.store(db, start_ns, numbers, accounts)
+            alarms.checkpoint(db, seq, max(chunk.end_ns for chunk in chunks), states)
+            retention.roll_up(db, start_ns // _HOUR_NS * _HOUR_NS)
+            retention.shed(db, self.settings.max_mib)
+        # Only now: before the commit nothing is certain.
+        self._points.update(numbers)
+        self._series.update(series)
+        count = len(self._readings)
+        self._readings.clear()
+        self.commits += 1
+        self.last_commit = now
+        return count
+
+    def close(self) -> None:
+        """Let go of the file. What waits is not committed; call `commit` before."""
+        if self._connection is not None:
+            self._connection.close()
+            self._connection = None
+
+    @property
+    def _open(self) -> sqlite3.Connection:
+        if self._connection is None:
+            raise sqlite3.ProgrammingError("the journal is not open")
+        return self._connection
+
+    def _point_number(self, db: sqlite3.Connection, point: PointId) -> int:
+        if point in self._points:
+            return self._points[point]
+        key = (point.machine, point.point)
+        db.execute("INSERT INTO point (machine, point) VALUES (?, ?) ON CONFLICT DO NOTHING", key)
+        return int(db.execute("SELECT id FROM point WHERE machine = ? AND point = ?", key).fetchone()["id"])
+
+    def _series_number(self, db: sqlite3.Connection, point: PointId, measure: Measure) -> int:
+        if (point, measure) in self._series:
+            return self._series[point, measure]
+        key = (self._point_number(db, point), measure)
+        db.execute("INSERT INTO series (point, measure) VALUES (?, ?) ON CONFLICT DO NOTHING", key)
+        return int(db.execute("SELECT id FROM series WHERE point = ? AND measure = ?", key).fetchone()["id"])
+
+
+class _Transaction:
+    """Commits at its end, or, where something is raised, changes nothing."""
+
+    def __init__(self, connection: sqlite3.Connection) -> None:
+        self._connection = connection
+
+    def __enter__(self) -> sqlite3.Connection:
+        self._connection.execute("BEGIN IMMEDIATE")
+        return self._connection
+
+    def __exit__(self, kind: type[BaseException] | None, *_: object) -> None:
+        if kind is None:
+            try:
+                self._connection.execute("COMMIT")
+            except sqlite3.Error:
+                self._roll_back()
+                raise
+        else:
+            self._roll_back()
+
+    def _roll_back(self) -> None:
+        if self._connection.in_transaction:
+            self._connection.execute("ROLLBACK")
+
+
+def _row(number: int, chunk: Chunk) -> tuple[object, ...]:
+    return (
+        number,
+        chunk.start_ns,
+        chunk.end_ns,
+        chunk.good_s,
+        chunk.mean_square,
+        chunk.maximum,
+        QUALITIES.index(chunk.worst),
+    )
