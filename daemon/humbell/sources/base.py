@@ -2,11 +2,9 @@
 
 from typing import Protocol
 
-from humbell.model import Block
+from humbell.model import Block, EndOfSource
 
-
-class EndOfSource(Exception):  # noqa: N818 - an end, not an error
-    """Everything that a recorded source holds has been read. A live source never raises it."""
+__all__ = ["EndOfSource", "Source"]
 
 
 class Source(Protocol):

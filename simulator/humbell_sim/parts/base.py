@@ -6,33 +6,39 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+# Signals are computed in whole chunks of so many samples and cut afterwards. Whatever the cut, each sample comes out of
+# the same operations, so it is the same to the last bit. At 51.2 kHz 80 ms; a chunk of float64 stays in the cache.
+CHUNK = 4096
+
 
 @dataclass(frozen=True, slots=True)
-class Span:
+class Chunk:
     """
-    Consecutive samples.
+    Names the consecutive samples from *number* × `CHUNK` on, `CHUNK` of them.
 
     Args:
-        first: number of the first one, from 0.
-
-        length: how many.
+        number: from 0.
 
         rate_hz: samples a second.
     """
 
-    first: int
-    length: int
+    number: int
     rate_hz: float
 
     @property
-    def time_s(self) -> NDArray[np.float64]:
-        """Times of the samples, (length,), s from the start."""
-        return (self.first + np.arange(self.length)) / self.rate_hz
+    def first(self) -> int:
+        """Number of the first sample, from 0."""
+        return self.number * CHUNK
+
+    @property
+    def start_s(self) -> float:
+        """Time of the first sample, s from the start."""
+        return self.first / self.rate_hz
 
 
 class Part(Protocol):
     """One cause of vibration, or of its loss."""
 
-    def apply(self, signal: NDArray[np.float64], span: Span) -> NDArray[np.float64]:
-        """Return *signal* (length,), m/s², of *span* with this part in it; *signal* itself stays as it is."""
+    def apply(self, signal: NDArray[np.float64], chunk: Chunk) -> NDArray[np.float64]:
+        """Return *signal* (CHUNK,), m/s², of *chunk* with this part in it; *signal* itself stays as it is."""
         ...

@@ -1,14 +1,14 @@
 """Broadband noise of flow and machine."""
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
-from humbell_sim.parts.base import Span
-
-# Noise is drawn in chunks of so many samples, each from a generator of its own, so that any sample can be drawn alone.
-_CHUNK = 4096
+from humbell_sim.parts.base import CHUNK, Chunk
 
 
+@dataclass(frozen=True, slots=True)
 class Noise:
     """
     White Gaussian noise.
@@ -19,13 +19,13 @@ class Noise:
         seed: of this noise; the same seed gives the same samples.
     """
 
-    def __init__(self, rms: float, seed: tuple[int, ...]) -> None:
-        self._rms = rms
-        self._seed = seed
+    rms: float
+    seed: tuple[int, ...]
 
-    def apply(self, signal: NDArray[np.float64], span: Span) -> NDArray[np.float64]:
+    def apply(self, signal: NDArray[np.float64], chunk: Chunk) -> NDArray[np.float64]:
         """See `Part`."""
-        first, last = span.first // _CHUNK, (span.first + span.length - 1) // _CHUNK
-        chunks = [np.random.default_rng((*self._seed, k)).standard_normal(_CHUNK) for k in range(first, last + 1)]
-        start = span.first - first * _CHUNK
-        return signal + self._rms * np.concatenate(chunks)[start : start + span.length]
+        # Each chunk has a generator of its own, so that any can be drawn alone.
+        generator = np.random.default_rng((*self.seed, chunk.number))
+        noise = generator.standard_normal(CHUNK, dtype=np.float32)
+        noise *= np.float32(self.rms)
+        return signal + noise
