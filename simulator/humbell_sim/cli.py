@@ -113,7 +113,7 @@ def feed(
 
     def sender(name: str, one: TarnholmSettings) -> Sender:
         # A client id of this process: two with the same would throw each other out for ever.
-        connect = lambda: MqttLink(broker, f"humbell-sim-{name}-{os.getpid()}")  # noqa: E731
+        connect = lambda: MqttLink(broker, f"humbell-sim-{name}-{os.getpid()}", time.monotonic)  # noqa: E731
         return Sender(Blocks(name, one, start_ns), connect, stop, time.monotonic, _tell)
 
     senders = [sender(name, one) for name, one in zip(_sources(source), settings, strict=True)]

@@ -2,7 +2,6 @@
 
 import select
 import ssl
-import time
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
@@ -73,7 +72,7 @@ class MqttLink:
         ConfigError: the broker does not let us in.
     """
 
-    def __init__(self, broker: Broker, client_id: str, monotonic: Callable[[], float] = time.monotonic) -> None:
+    def __init__(self, broker: Broker, client_id: str, monotonic: Callable[[], float]) -> None:
         self.window = _WINDOW
         self._most_bytes: int | None = None
         self._at = f"{broker.host}:{broker.port}"
