@@ -2,7 +2,7 @@
 
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass, is_dataclass
 
 import structlog
 
@@ -102,16 +102,17 @@ class Intake:
     @property
     def state(self) -> SourceState:
         """How it is doing."""
-        details = getattr(self._source, "details", None)
+        counters = getattr(self._source, "counters", None)
+        link = getattr(self._source, "health", None)
         return SourceState(
             name=self.name,
             state=self._state,
-            trouble=self._trouble or str(getattr(self._source, "trouble", "") or ""),
+            trouble=self._trouble or str(getattr(link, "trouble", None) or ""),
             blocks=self._count,
             seconds=self._seconds,
             age_s=None if self._last_ns is None else (time.monotonic_ns() - self._last_ns) / 1e9,
             opened=self._opened,
-            details=dict(details()) if callable(details) else {},
+            details=asdict(counters) if is_dataclass(counters) and not isinstance(counters, type) else {},
         )
 
     def _turn(self) -> bool:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any, Protocol
 
 from pydantic import BaseModel, Field
 
-from humbell.sources import ReplaySettings, Source
+from humbell.sources import MqttSettings, ReplaySettings, Source
 
 GROUP = "humbell.sources"
 
@@ -71,7 +71,7 @@ def plugins() -> tuple[dict[str, Plugin], dict[str, str]]:
     return found, broken
 
 
-BUILT_IN: dict[str, type[BaseModel]] = {"replay": ReplaySettings}
+BUILT_IN: dict[str, type[BaseModel]] = {"replay": ReplaySettings, "mqtt": MqttSettings}
 
 if TYPE_CHECKING:
     SourceSettings = Any

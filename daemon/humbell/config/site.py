@@ -11,6 +11,7 @@ from humbell.journal import JournalSettings
 from humbell.measures import AccelerationBand, VelocityBand
 from humbell.model import ChannelId, Id
 from humbell.sources import Sensitivity
+from humbell.wire import BrokerSettings
 
 
 def _off(value: object) -> object:
@@ -128,5 +129,6 @@ class Site(_Settings):
     journal: Annotated[JournalSettings, Field(description="where everything is written to first")] = Field(
         default_factory=JournalSettings
     )
+    brokers: Annotated[dict[Id, BrokerSettings], Field(description="MQTT brokers, by id")] = Field(default_factory=dict)
     sources: Annotated[dict[Id, SourceSettings], Field(min_length=1, description="what delivers samples, by id")]
     machines: Annotated[dict[Id, Machine], Field(min_length=1, description="what is watched, by id")]

@@ -2,6 +2,9 @@
 
 from humbell.sources.base import EndOfSource, Source
 from humbell.sources.continuity import Continuation, Continuity, Join
+from humbell.sources.counters import SourceCounters
+from humbell.sources.hub import MqttHub
+from humbell.sources.mqtt import MqttSettings, MqttSource
 from humbell.sources.replay import Recording, ReplaySource
 from humbell.sources.scale import Sensitivity, gain
 from humbell.sources.settings import ReplaySettings
@@ -11,10 +14,14 @@ __all__ = [
     "Continuity",
     "EndOfSource",
     "Join",
+    "MqttHub",
+    "MqttSettings",
+    "MqttSource",
     "Recording",
     "ReplaySettings",
     "ReplaySource",
     "Sensitivity",
     "Source",
+    "SourceCounters",
     "gain",
 ]
