@@ -1,5 +1,6 @@
 """The contract of every source: one suite, run over a factory for each kind."""
 
+import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from itertools import pairwise
@@ -13,6 +14,9 @@ from scipy.io import wavfile
 
 from humbell.model import Block, SampleUnit
 from humbell.sources import Continuity, EndOfSource, Join, ReplaySettings, ReplaySource, Source
+from humbell_sim.plugin import plugin
+from humbell_sim.settings import TarnholmSettings
+from humbell_sim.tarnholm import renderer
 
 START_NS = 1_772_359_200_000_000_000  # 2026-03-01T10:00:00Z
 RATE_HZ = 4000
@@ -84,7 +88,17 @@ def replay_pieces(folder: Path) -> Case:
     return Case(make, x, SampleUnit.VOLT)
 
 
-@pytest.fixture(params=[replay_wav, replay_stream, replay_split, replay_pieces])
+def tarnholm_plug_in(_folder: Path) -> Case:
+    def make(block_s: float) -> Source:
+        settings = TarnholmSettings(
+            kind="tarnholm", channels=2, rate_hz=RATE_HZ, pace=0, seconds=3001 / RATE_HZ, block_s=min(block_s, 10.0)
+        )
+        return plugin.create("src", settings, time.monotonic, lambda: START_NS)
+
+    return Case(make, renderer(seed=1, count=2, rate_hz=RATE_HZ).render(0, 3001), SampleUnit.G)
+
+
+@pytest.fixture(params=[replay_wav, replay_stream, replay_split, replay_pieces, tarnholm_plug_in])
 def case(request: pytest.FixtureRequest, tmp_path: Path) -> Case:
     """One case for each kind of source."""
     made: Case = request.param(tmp_path)
