@@ -80,7 +80,7 @@ def parse(text: str, name: str) -> Site:
     site = None
     try:
         tree = apply_templates(tree)
-        for wrong in (_wrong_channels, _wrong_rates):
+        for wrong in (_wrong_brokers, _wrong_channels, _wrong_rates):
             problems += (problem(name, tree.line(place), place, said) for place, said in wrong(tree))
         site = validate(Site, tree, name)
     except ConfigError as error:
@@ -120,6 +120,15 @@ def _points(tree: Tree) -> Iterator[tuple[Place, dict[str, Value], ChannelId]]:
             except ValueError:
                 continue
             yield ("machines", machine, "points", point), chosen, channel
+
+
+def _wrong_brokers(tree: Tree) -> Iterator[tuple[Place, str]]:
+    """Find sources whose broker is not there."""
+    sources, brokers = tree.data.get("sources"), tree.data.get("brokers", {})
+    for name, settings in sources.items() if isinstance(sources, dict) else ():
+        broker = settings.get("broker") if isinstance(settings, dict) and settings.get("kind") == "mqtt" else None
+        if isinstance(broker, str) and isinstance(brokers, dict) and broker not in brokers:
+            yield ("sources", name, "broker"), f"there is no broker '{broker}' ({known(broker, brokers)})"
 
 
 def _wrong_channels(tree: Tree) -> Iterator[tuple[Place, str]]:

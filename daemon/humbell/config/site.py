@@ -111,6 +111,14 @@ class Point(_Settings):
         Acceleration | None, BeforeValidator(_off), Field(description="bearing condition; `off`: not measured")
     ] = Field(default_factory=Acceleration)
 
+    @model_validator(mode="after")
+    def _measures_something(self) -> "Point":
+        if self.velocity is None and self.acceleration is None:
+            raise ValueError(
+                "velocity and acceleration are both off, so nothing is measured (leave one on, or take the point out)"
+            )
+        return self
+
 
 class Machine(_Settings):
     """A machine train with its points."""

@@ -25,9 +25,9 @@ Place = tuple[str, ...]
 
 
 def models_in(annotation: object) -> list[type[BaseModel]]:
-    """Return the models that a value of this type may hold, unions and mappings included."""
+    """Return our models that a value of this type may hold, unions and mappings included; plug-ins' are their own."""
     if isinstance(annotation, type) and issubclass(annotation, BaseModel):
-        return [annotation]
+        return [annotation] if annotation.__module__.startswith("humbell.") else []
     return [model for inner in get_args(annotation) for model in models_in(inner)]
 
 
@@ -41,10 +41,16 @@ def fields_of(model: type[BaseModel]) -> set[Field]:
     return found
 
 
-def shown(model: type[BaseModel], data: Value, path: Place = ()) -> dict[Place, Field]:
+def is_of(model: type[BaseModel], data: Value) -> bool:
+    """Return whether *data* is for *model*, and not for one of another kind."""
+    kind = model.model_fields.get("kind")
+    return isinstance(data, dict) and (kind is None or data.get("kind") in get_args(kind.annotation))
+
+
+def shown(model: type[BaseModel], data: dict[str, Value], path: Place = ()) -> dict[Place, Field]:
     """Return the fields that stand in *data*, a file's content for *model*, by their paths."""
     found: dict[Place, Field] = {}
-    for name, value in data.items() if isinstance(data, dict) else ():
+    for name, value in data.items():
         field = model.model_fields[name]
         here = (*path, name)
         found[here] = (model, name)
@@ -53,7 +59,8 @@ def shown(model: type[BaseModel], data: Value, path: Place = ()) -> dict[Place, 
             parts = {(*here, key): part for key, part in value.items()}
         for inner in models_in(field.annotation):
             for at, part in parts.items():
-                found |= shown(inner, part, at)
+                if isinstance(part, dict) and is_of(inner, part):
+                    found |= shown(inner, part, at)
     return found
 
 
@@ -91,7 +98,12 @@ def test_every_default_stands_in_the_example_as_a_commented_out_line() -> None:
     """Whatever has a default is shown with it."""
     given = shown_in(NODE)
     commented = {field for path, field in shown_in(WITHOUT_MARKS).items() if path not in given}
-    optional = {(model, name) for model, name in fields_of(Site) if not model.model_fields[name].is_required()}
+    optional = {
+        (model, name)
+        for model, name in fields_of(Site)
+        if not model.model_fields[name].is_required()
+        and get_origin(model.model_fields[name].annotation) is not dict  # none by default: its entries are the example
+    }
     assert names(optional - commented) == []
 
 

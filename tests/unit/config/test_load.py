@@ -175,6 +175,19 @@ def test_a_channel_belongs_to_one_point(tmp_path: Path, channel: str) -> None:
 
 
 @pytest.mark.parametrize(
+    ("brokers", "known"),
+    [("brokers: {local: {host: 127.0.0.1}}", "did you mean 'local'? known: local"), ("", "known: none")],
+)
+def test_a_source_names_a_broker_that_is_there(tmp_path: Path, brokers: str, known: str) -> None:
+    """A slip of the pen is told before the start, and not by a source that never speaks."""
+    text = GOOD.replace("machines:", f"  wifi-1: {{kind: mqtt, broker: lokal}}\n{brokers}\nmachines:")
+    assert problems(tmp_path, text) == [
+        f"node.yaml:4: sources.wifi-1.broker: there is no broker 'lokal' ({known})",
+    ]
+    loaded(tmp_path, text.replace("lokal", "local") if brokers else GOOD)
+
+
+@pytest.mark.parametrize(
     ("rate_hz", "band_hz", "said"),
     [
         (2560, "[10, 1001]", "2560 Hz carries a band up to 1000 Hz, not to 1001 Hz (give band_hz: [10, 1000], or "),

@@ -11,8 +11,8 @@ from humbell.measures import Band, Quantity
 from humbell.model import ChannelId
 from humbell.sources import Sensitivity
 
-# The example of the design, section 8, as far as its settings exist.
-DESIGN = """\
+# A node with every setting of machines and points.
+WHOLE = """\
 site: tarnholm-water                # invented; all examples play in this invented water works
 node: pumphouse-1                   # default: from the computer's serial number
 sources:
@@ -135,9 +135,9 @@ def test_a_bearing_that_cannot_be_is_refused(settings: dict[str, float], said: s
     assert said in problems(Bearing, **settings)[0]
 
 
-def test_all_that_the_design_shows_and_that_exists_is_understood() -> None:
+def test_every_setting_of_a_machine_is_understood() -> None:
     """The example of section 8 gives each setting the meaning that it has there."""
-    site = parse(DESIGN, "node.yaml")
+    site = parse(WHOLE, "node.yaml")
     machine = site.machines["p-101"]
     assert (site.site, site.node, list(site.sources)) == ("tarnholm-water", "pumphouse-1", ["tape"])
     assert (machine.name, machine.speed, machine.group) == ("Raw water pump 1", Speed(rpm=1480), "raw-water-pumps")
@@ -172,9 +172,15 @@ def test_an_overall_is_left_out_by_off() -> None:
     assert problems(Point, channel="tape/0", velocity=True) != []
 
 
+def test_a_point_that_measures_nothing_is_refused() -> None:
+    """Its seconds would be in no category of the ledger."""
+    with pytest.raises(ValidationError, match=r"nothing is measured \(leave one on, or take the point out\)"):
+        Point.model_validate({"channel": "tape/0", "velocity": False, "acceleration": False})
+
+
 @pytest.mark.parametrize(("rate_hz", "frame_s"), [((10, 1000), 1.0), ((2, 1000), 5.0), ((20, 1000), 1.0)])
 def test_a_frame_holds_ten_periods_of_the_lower_edge(rate_hz: tuple[float, float], frame_s: float) -> None:
-    """A second, or more where the band begins below 10 Hz: 5 s from 2 Hz on (the design's section 2)."""
+    """A second, or more where the band begins below 10 Hz: 5 s from 2 Hz on."""
     assert Velocity(band_hz=rate_hz).frame_in_force_s == frame_s
 
 
