@@ -11,6 +11,9 @@ from humbell.measures.rails import Rails
 # No working sensor and converter give the same number so long; 128 samples keep a coarse slow converter out of it.
 _FLAT_S, _FLAT_SAMPLES = 0.1, 128
 
+# No sensor and converter come near it in any unit, and squares of more overflow float32: a filter would never recover.
+_SANE = 1e15
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Findings:
@@ -18,7 +21,7 @@ class Findings:
     What the check found in one frame, one value a channel.
 
     Args:
-        non_finite: there are values that are no numbers.
+        non_finite: there are values that are no numbers, or larger than any sensor gives.
 
         flat: the signal stood still for a tenth of a second or more.
 
@@ -56,7 +59,8 @@ class SensorCheck:
         starts = np.arange(0, length, window)
         highest = np.maximum.reduceat(samples, starts, axis=1)
         lowest = np.minimum.reduceat(samples, starts, axis=1)
-        non_finite = np.asarray(~(np.isfinite(highest) & np.isfinite(lowest)).all(axis=1))
+        # What is no number compares as false.
+        non_finite = np.asarray(~((highest < _SANE) & (lowest > -_SANE)).all(axis=1))
         still = (highest == lowest)[:, : max(length // window, 1)].any(axis=1) & ~non_finite
         flat = np.zeros(len(samples), dtype=bool)
         for c in np.flatnonzero(still):

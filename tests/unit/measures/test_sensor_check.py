@@ -85,3 +85,12 @@ def test_a_channel_that_stands_still_at_the_rail_is_dead_and_not_clipped() -> No
     found = judge(samples, full_scale=50.0)
     assert found.flat.tolist() == [True, False]
     assert found.clipped.tolist() == [0, 0]
+
+
+@pytest.mark.parametrize("absurd", [1e15, -1e20, 3e38])
+def test_values_beyond_any_sensor_count_as_no_numbers(absurd: float) -> None:
+    """Finite ones that large would overflow on their way and stay in the filters for ever."""
+    samples = np.random.default_rng(1).standard_normal((2, 5120)).astype(np.float32)
+    samples[0, 77] = absurd
+    found = SensorCheck(5120.0, np.full(2, np.nan)).judge(samples)
+    assert found.non_finite.tolist() == [True, False]
