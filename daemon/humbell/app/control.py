@@ -21,6 +21,8 @@ _CLIENT_S = 5.0
 _MAX_BYTES = 64 * 1024
 # What the kernel allows for a path in an address, with the zero at its end.
 _MAX_PATH = 107
+# What may pass without a change of the configuration: a disk that is full or away.
+_MAY_PASS = {errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EIO}
 # Owner and group: whoever may acknowledge alarms is in the group of the service.
 _MODE = stat.S_IRUSR | stat.S_IWUSR | stat.S_IRGRP | stat.S_IWGRP
 
@@ -43,6 +45,8 @@ class Control:
 
     Raises:
         ConfigError: another service listens there, or there can be no socket.
+
+        OutOfReachError: the disk is full or away.
     """
 
     def __init__(self, path: Path, handle: Handle) -> None:
@@ -120,6 +124,7 @@ def _listen(path: Path) -> socket.socket:
     listener = socket.socket(socket.AF_UNIX, socket.SOCK_STREAM)
     listener.settimeout(_TURN_S)
     try:
+        path.parent.mkdir(parents=True, exist_ok=True)
         if _is_answered(path):
             raise FileExistsError(errno.EADDRINUSE, "another humbell runs with this journal")
         path.unlink(missing_ok=True)
@@ -128,6 +133,8 @@ def _listen(path: Path) -> socket.socket:
         listener.listen()
     except OSError as error:
         listener.close()
+        if error.errno in _MAY_PASS:
+            raise OutOfReachError(f"{path}: there can be no socket: {error.strerror} (check space and disk)") from None
         raise ConfigError(
             f"{path}: there can be no socket: {error.strerror} (stop the other one, or check the folder's rights)"
         ) from None

@@ -72,6 +72,7 @@ class Intake:
         self._opened = 0
         self._pause_s = _FIRST_PAUSE_S
         self._waiting: Block | None = None
+        self._born_ns = time.monotonic_ns()
         self.task = Task(f"source {source.name}", self._turn)
 
     @property
@@ -126,6 +127,8 @@ class Intake:
             return False
         except HumbellError as error:
             self._lose(str(error))
+        except Exception as error:  # noqa: BLE001 - somebody else's driver: whatever it raises, a new start may help
+            self._lose(f"sources.{self.name}: {type(error).__name__}: {error} (see its driver)")
         return True
 
     def _open(self) -> None:
@@ -148,6 +151,8 @@ class Intake:
         return True
 
     def _lose(self, trouble: str) -> None:
+        if self.task.stopping:
+            return
         if trouble != self._trouble:
             _log.warning("source_away", source=self.name, trouble=trouble, again_in_s=self._pause_s)
         self._state, self._trouble = "away", trouble

@@ -73,6 +73,11 @@ class Line:
         """What joins up, with its counters."""
         return self._continuity
 
+    @property
+    def refused_blocks(self) -> int:
+        """Blocks that came twice or too late, and so were not measured."""
+        return self._continuity.duplicate_blocks + self._continuity.late_blocks + self.late_blocks
+
     def resume(self, ends_ns: Mapping[PointId, int], started_ns: int) -> None:
         """
         Go on from a journal.
@@ -119,7 +124,7 @@ class Line:
             readings += self._nothing(self._until_ns, fresh.start_ns)
         elif join.join not in _UNBROKEN or bank is not self._bank or (fresh.piece and not self._is_piece):
             # What waited is told at its own time, unless something was lost behind it.
-            end_ns = fresh.start_ns if join.missing_s > 0 else self._until_ns
+            end_ns = max(fresh.start_ns, self._until_ns) if join.missing_s > 0 else self._until_ns
             readings += self._bank.reset(join.missing_s, end_ns)
         self._is_silent, self._is_piece = False, fresh.piece
         self._bank, self._kind = bank, kind

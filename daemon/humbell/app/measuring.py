@@ -78,7 +78,12 @@ class Measuring:
         answer: Future[Transition | None] = Future()
         if not self._acts.put((alarm, event, answer), timeout_s):
             raise TimeoutError
-        return answer.result(timeout_s)
+        try:
+            return answer.result(timeout_s)
+        except TimeoutError:
+            # Who was told that it was not done must not find it done later.
+            answer.cancel()
+            raise
 
     def finish(self) -> None:
         """Measure what still waits, once the task and all sources have ended."""
@@ -97,6 +102,8 @@ class Measuring:
         return True
 
     def _measure(self, block: Block) -> None:
+        line = self._chain.lines[block.source]
+        refused = line.refused_blocks
         try:
             self._hand_on(self._chain.feed(block))
         except ConfigError as error:
@@ -106,7 +113,7 @@ class Measuring:
                 _log.warning("blocks_unusable", source=block.source, trouble=trouble)
             self.troubles[block.source] = trouble
         else:
-            self.measured_blocks += 1
+            self.measured_blocks += line.refused_blocks == refused
             self.troubles.pop(block.source, None)
         self._told_silent_ns.pop(block.source, None)
 

@@ -30,6 +30,8 @@ def run(loaded: Loaded) -> int:
     Raises:
         ConfigError: sources or socket cannot be made.
 
+        OutOfReachError: the disk is full or away.
+
         JournalError: there can be no journal.
     """
     asked = threading.Event()
@@ -42,13 +44,18 @@ def run(loaded: Loaded) -> int:
     for number in (signal.SIGTERM, signal.SIGINT):
         signal.signal(number, on_signal)
 
-    clock = Clock()
-    service = Service(loaded, make_sources(loaded.site), clock)
-
     def answer(request: Mapping[str, Any]) -> Mapping[str, Any]:
         return handle(service, request)
 
+    clock = Clock()
+    sources = make_sources(loaded.site)
+    # Before the journal is opened: who finds another one running must not touch its journal.
     control = Control(socket_path(loaded.site.journal.path), answer)
+    try:
+        service = Service(loaded, sources, clock)
+    except BaseException:
+        control.close()
+        raise
     service.start()
     control.task.start()
     _log.info("started", site=loaded.site.site, node=service.node, sources=list(loaded.site.sources))

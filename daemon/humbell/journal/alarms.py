@@ -1,5 +1,6 @@
 """Alarms in the journal: transitions for ever, and the states from which a restart goes on."""
 
+import contextlib
 import json
 import math
 import sqlite3
@@ -60,13 +61,17 @@ def checkpoint(connection: sqlite3.Connection, seq: int, time_ns: int, states: M
 
 
 def states(connection: sqlite3.Connection) -> dict[AlarmId, AlarmState]:
-    """Return the last committed state of every alarm: the checkpoint, and what transitions changed since."""
-    found: dict[AlarmId, AlarmState] = {}
+    """
+    Return the last committed state of every alarm: the checkpoint, and what transitions changed since.
+
+    Where the checkpoint is damaged, transitions alone tell it, and timers begin anew.
+    """
     row = connection.execute("SELECT seq, states FROM checkpoint").fetchone()
+    since, found = 0, {}
     if row is not None:
-        for machine, point, measure, kind, state in json.loads(zlib.decompress(row["states"])):
-            found[AlarmId(machine, point, Measure(measure), AlarmType(kind))] = _state(state)
-    since = 0 if row is None else row["seq"]
+        # SQLite's check sees whether pages hang together, not what stands in them.
+        with contextlib.suppress(zlib.error, ValueError):
+            since, found = row["seq"], _checkpoint(row["states"])
     for later in connection.execute("SELECT * FROM transition WHERE seq > ? ORDER BY seq", (since,)):
         found[_alarm(later)] = _state(json.loads(later["state"]))
     return found
@@ -76,6 +81,13 @@ def transitions(connection: sqlite3.Connection, after: int = 0, limit: int = 100
     """Return the newest *limit* transitions with numbers above *after*, oldest first."""
     rows = connection.execute("SELECT * FROM transition WHERE seq > ? ORDER BY seq DESC LIMIT ?", (after, limit))
     return [Stored(row["seq"], _transition(row)) for row in reversed(rows.fetchall())]
+
+
+def _checkpoint(blob: bytes) -> dict[AlarmId, AlarmState]:
+    return {
+        AlarmId(machine, point, Measure(measure), AlarmType(kind)): _state(state)
+        for machine, point, measure, kind, state in json.loads(zlib.decompress(blob))
+    }
 
 
 def _key(alarm: AlarmId) -> tuple[str, str, str, str]:

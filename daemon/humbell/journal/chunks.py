@@ -107,7 +107,8 @@ def pack(readings: Iterable[Reading], *, keep_values: bool) -> Chunk:
         start_ns=first.time_ns - round(first.span_s * 1e9),
         end_ns=last.time_ns,
         good_s=good_s,
-        mean_square=math.fsum(r.span_s * r.value**2 for r in good) / good_s if good_s else None,
+        # Neither ** nor fsum: both raise where a hostile value overflows, and one such value would stop the journal.
+        mean_square=sum(r.span_s * r.value * r.value for r in good) / good_s if good_s else None,
         maximum=max(shown, default=None),
         worst=max((r.quality for r in all_), key=QUALITIES.index),
         readings=_encode(all_) if keep_values else None,
@@ -169,7 +170,9 @@ def _decode(blob: bytes) -> tuple[NDArray[Any], ...]:
         body = zlib.decompress(blob[1:])
     except zlib.error as error:
         raise ValueError(f"readings are damaged: {error}") from None
-    count = len(body) // _ROW_BYTES
+    count, rest = divmod(len(body), _ROW_BYTES)
+    if rest:
+        raise ValueError(f"readings are damaged: {len(body)} bytes are no whole rows of {_ROW_BYTES}")
     columns, at = [], 0
     for kind in _COLUMNS:
         size = np.dtype(kind).itemsize
@@ -177,6 +180,8 @@ def _decode(blob: bytes) -> tuple[NDArray[Any], ...]:
         columns.append(np.ascontiguousarray(stored.reshape(size, count).T).view(kind).ravel())
         at += count * size
     ends_us, spans_us, codes, marks, causes = columns
+    if np.any(marks & ~np.uint8(_PIECE) >= len(QUALITIES)) or np.any(causes >= len(_CAUSES)):
+        raise ValueError("readings hold qualities or causes that are not known (update Humbell)")
     return np.cumsum(ends_us), np.cumsum(spans_us), codes, marks, causes
 
 

@@ -100,7 +100,9 @@ def owed(connection: sqlite3.Connection, outlet: str) -> list[tuple[int, int]]:
 
 def settle(connection: sqlite3.Connection, outlet: str, up_to: int) -> None:
     """Remember, in the open transaction, that *outlet* owes nothing up to *up_to* any more."""
-    connection.execute("DELETE FROM backlog WHERE outlet = ? AND last_seq <= ?", (outlet, up_to))
-    connection.execute(
-        "UPDATE backlog SET first_seq = ? WHERE outlet = ? AND first_seq <= ?", (up_to + 1, outlet, up_to)
-    )
+    (last,) = connection.execute(
+        "SELECT max(last_seq) FROM backlog WHERE outlet = ? AND first_seq <= ?", (outlet, up_to)
+    ).fetchone()
+    connection.execute("DELETE FROM backlog WHERE outlet = ? AND first_seq <= ?", (outlet, up_to))
+    if last is not None and last > up_to:
+        owe(connection, outlet, up_to + 1, last)

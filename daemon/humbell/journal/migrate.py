@@ -34,7 +34,9 @@ def migrate(connection: sqlite3.Connection) -> list[str]:
             connection.execute("INSERT INTO migration VALUES (?)", (name,))
             connection.execute("COMMIT")
         except BaseException:
-            connection.execute("ROLLBACK")
+            # On a full disk SQLite has rolled back by itself.
+            if connection.in_transaction:
+                connection.execute("ROLLBACK")
             raise
         taken.append(name)
     return taken
@@ -47,3 +49,5 @@ def _statements(script: str) -> Iterator[str]:
         if sqlite3.complete_statement(statement):
             yield statement
             statement = ""
+    # The last statement may lack its semicolon; comments do no harm.
+    yield statement

@@ -1,9 +1,9 @@
 """Reads a journal, live or left behind, without being able to change it."""
 
 import sqlite3
-from collections.abc import Iterator
+from collections.abc import Collection, Iterator
 
-from humbell.journal.chunks import QUALITIES, Chunk, unpack
+from humbell.journal.chunks import QUALITIES, SERIES, Chunk, unpack
 from humbell.model import Measure, PointId, Reading
 
 
@@ -45,3 +45,25 @@ def readings(
         for reading in unpack(chunk):
             if start_ns < reading.time_ns <= end_ns:
                 yield reading
+
+
+def ends(connection: sqlite3.Connection, points: Collection[PointId]) -> dict[PointId, int]:
+    """Return up to which time, UTC ns since 1970, the newest readings of each of *points* go, where there are any."""
+    series = {
+        row["id"]: PointId(row["machine"], row["point"])
+        for row in connection.execute("SELECT s.id, machine, p.point FROM series s JOIN point p ON p.id = s.point")
+    }
+    missing = set(points) & set(series.values())
+    found: dict[PointId, int] = {}
+    commit = None
+    # Backwards, and only as far as needed: a year's journal has some 30 million rows.
+    for row in connection.execute("SELECT id, end_ns FROM chunk ORDER BY id DESC"):
+        if row["id"] // SERIES != commit:
+            missing -= found.keys()
+            if not missing:
+                break
+            commit = row["id"] // SERIES
+        point = series[row["id"] % SERIES]
+        if point in missing:
+            found[point] = max(row["end_ns"], found.get(point, row["end_ns"]))
+    return found

@@ -5,6 +5,8 @@ import sqlite3
 _HOUR_NS = 3600 * 10**9
 # Values are shed in lots, so that the cap is not met again with every commit.
 _LOT = 2000
+# Free pages in the file with which it need not grow on a full disk: a commit takes some ten.
+SPARE_PAGES = 128
 
 
 def roll_up(connection: sqlite3.Connection, before_ns: int) -> None:
@@ -28,12 +30,24 @@ def roll_up(connection: sqlite3.Connection, before_ns: int) -> None:
     )
 
 
-def shed(connection: sqlite3.Connection, max_mib: int) -> int:
-    """Drop the oldest one-second values, in the open transaction, where the file is over *max_mib*; return how many."""
+def shed(connection: sqlite3.Connection, max_mib: int, spare_pages: int = 0) -> int:
+    """
+    Drop a lot of the oldest one-second values, in the open transaction, where there is too little room.
+
+    Args:
+        connection: with an open transaction.
+
+        max_mib: size that the file may have, free pages not counted.
+
+        spare_pages: free pages that it is to have.
+
+    Returns:
+        How many blobs were dropped.
+    """
     (pages,) = connection.execute("PRAGMA page_count").fetchone()
     (free,) = connection.execute("PRAGMA freelist_count").fetchone()
     (page_bytes,) = connection.execute("PRAGMA page_size").fetchone()
-    if (pages - free) * page_bytes <= max_mib * 2**20:
+    if (pages - free) * page_bytes <= max_mib * 2**20 and free >= spare_pages:
         return 0
     oldest = connection.execute("SELECT id FROM chunk_values ORDER BY id LIMIT ?", (_LOT,)).fetchall()
     if not oldest:

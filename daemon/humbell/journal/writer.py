@@ -10,8 +10,10 @@ from humbell.alarms import AlarmState
 from humbell.journal import alarms, audit, coverage, feed, retention
 from humbell.journal.audit import Deed
 from humbell.journal.chunks import QUALITIES, Chunk, chunk_id, pack
-from humbell.journal.db import open_for_writing
+from humbell.journal.db import JournalError, open_for_writing
+from humbell.journal.disk import Disk
 from humbell.journal.feed import Kind
+from humbell.journal.reader import ends
 from humbell.journal.settings import JournalSettings
 from humbell.model import AlarmId, Measure, Moment, PointId, Reading, Transition
 
@@ -79,7 +81,7 @@ class Journal:
         self.settings = settings
         self._watched = watched
         self._now = now
-        self._connection: sqlite3.Connection | None = None
+        self._disk: Disk | None = None
         self._points: dict[PointId, int] = {}
         self._series: dict[tuple[PointId, Measure], int] = {}
         self._readings: list[Reading] = []
@@ -93,23 +95,22 @@ class Journal:
         Raises:
             JournalError: there can be no journal there.
         """
-        self._connection, aside = open_for_writing(self.settings.path)
-        now = self._now()
-        with _Transaction(self._connection) as db:
-            db.execute("INSERT INTO boot VALUES (?, ?, ?, ?)", (now.boot, now.mono_ns, now.utc_ns, now.clock_known))
-            db.execute(
-                "INSERT INTO configuration VALUES (?, ?, ?) ON CONFLICT DO NOTHING",
-                (self._watched.digest, now.utc_ns, self._watched.content),
-            )
-        ends = self._connection.execute(
-            "SELECT p.machine, p.point, max(end_ns) e FROM chunk c "
-            "JOIN series s ON s.id = c.id % 4096 JOIN point p ON p.id = s.point GROUP BY p.id"
-        )
-        return Resumed(
-            states=alarms.states(self._connection),
-            ends_ns={PointId(row["machine"], row["point"]): row["e"] for row in ends},
-            put_aside=aside,
-        )
+        path = self.settings.path
+        connection, aside = open_for_writing(path)
+        self._disk = Disk(connection, path, self.settings.max_mib)
+        try:
+            self._disk.write(self._begin)
+            return Resumed(alarms.states(connection), ends(connection, self._watched.counted), aside)
+        except sqlite3.Error as error:
+            self.close()
+            raise JournalError(
+                f"{path}: the journal cannot be written: {error} (check space and disk, and what else has it open)"
+            ) from error
+
+    @property
+    def trouble(self) -> str:
+        """What is wrong though everything is written, and what to do; empty while nothing is."""
+        return "" if self._disk is None else self._disk.trouble
 
     @property
     def pending_s(self) -> float:
@@ -129,9 +130,14 @@ class Journal:
         Raises:
             sqlite3.Error: it could not be written; it does not count, and may be told again.
         """
-        with _Transaction(self._open) as db:
-            seq = feed.append(db, Kind.TRANSITION, self._now(), self._watched.digest)
+        now = self._now()
+
+        def work(db: sqlite3.Connection) -> int:
+            seq = feed.append(db, Kind.TRANSITION, now, self._watched.digest)
             alarms.store(db, seq, transition, state)
+            return seq
+
+        seq = self._open.write(work)
         self.commits += 1
         return seq
 
@@ -142,9 +148,14 @@ class Journal:
         Raises:
             sqlite3.Error: it could not be written, so the deed must not be done.
         """
-        with _Transaction(self._open) as db:
-            seq = feed.append(db, Kind.AUDIT, self._now(), self._watched.digest)
+        now = self._now()
+
+        def work(db: sqlite3.Connection) -> int:
+            seq = feed.append(db, Kind.AUDIT, now, self._watched.digest)
             audit.store(db, seq, deed)
+            return seq
+
+        seq = self._open.write(work)
         self.commits += 1
         return seq
 
@@ -157,6 +168,7 @@ class Journal:
         """
         if not self._readings:
             return 0
+        disk = self._open
         now = self._now()
         groups: dict[tuple[PointId, Measure], list[Reading]] = defaultdict(list)
         for reading in self._readings:
@@ -166,7 +178,10 @@ class Journal:
         )
         chunks = [pack(group, keep_values=key[1] in self._watched.kept) for key, group in groups.items()]
         start_ns = min(chunk.start_ns for chunk in chunks)
-        with _Transaction(self._open) as db:
+
+        def work(db: sqlite3.Connection) -> tuple[dict[PointId, int], dict[tuple[PointId, Measure], int]]:
+            # First: what is shed makes room for what follows, and never is what follows.
+            disk.shed(db)
             series = {key: self._series_number(db, *key) for key in groups}
             numbers = {point: self._point_number(db, point) for point, _ in groups}
             seq = feed.append(db, Kind.CHUNKS, now, self._watched.digest)
@@ -181,7 +196,9 @@ class Journal:
             coverage.store(db, start_ns, numbers, accounts)
             alarms.checkpoint(db, seq, max(chunk.end_ns for chunk in chunks), states)
             retention.roll_up(db, start_ns // _HOUR_NS * _HOUR_NS)
-            retention.shed(db, self.settings.max_mib)
+            return numbers, series
+
+        numbers, series = disk.write(work)
         # Only now: before the commit nothing is certain.
         self._points.update(numbers)
         self._series.update(series)
@@ -189,19 +206,28 @@ class Journal:
         self._readings.clear()
         self.commits += 1
         self.last_commit = now
+        disk.look()
         return count
 
     def close(self) -> None:
         """Let go of the file. What waits is not committed; call `commit` before."""
-        if self._connection is not None:
-            self._connection.close()
-            self._connection = None
+        if self._disk is not None:
+            self._disk.close()
+            self._disk = None
 
     @property
-    def _open(self) -> sqlite3.Connection:
-        if self._connection is None:
+    def _open(self) -> Disk:
+        if self._disk is None:
             raise sqlite3.ProgrammingError("the journal is not open")
-        return self._connection
+        return self._disk
+
+    def _begin(self, db: sqlite3.Connection) -> None:
+        now = self._now()
+        db.execute("INSERT INTO boot VALUES (?, ?, ?, ?)", (now.boot, now.mono_ns, now.utc_ns, now.clock_known))
+        db.execute(
+            "INSERT INTO configuration VALUES (?, ?, ?) ON CONFLICT DO NOTHING",
+            (self._watched.digest, now.utc_ns, self._watched.content),
+        )
 
     def _point_number(self, db: sqlite3.Connection, point: PointId) -> int:
         if point in self._points:
@@ -216,31 +242,6 @@ class Journal:
         key = (self._point_number(db, point), measure)
         db.execute("INSERT INTO series (point, measure) VALUES (?, ?) ON CONFLICT DO NOTHING", key)
         return int(db.execute("SELECT id FROM series WHERE point = ? AND measure = ?", key).fetchone()["id"])
-
-
-class _Transaction:
-    """Commits at its end, or, where something is raised, changes nothing."""
-
-    def __init__(self, connection: sqlite3.Connection) -> None:
-        self._connection = connection
-
-    def __enter__(self) -> sqlite3.Connection:
-        self._connection.execute("BEGIN IMMEDIATE")
-        return self._connection
-
-    def __exit__(self, kind: type[BaseException] | None, *_: object) -> None:
-        if kind is None:
-            try:
-                self._connection.execute("COMMIT")
-            except sqlite3.Error:
-                self._roll_back()
-                raise
-        else:
-            self._roll_back()
-
-    def _roll_back(self) -> None:
-        if self._connection.in_transaction:
-            self._connection.execute("ROLLBACK")
 
 
 def _row(number: int, chunk: Chunk) -> tuple[object, ...]:

@@ -14,7 +14,12 @@ class Receiver(Protocol):
     """Takes the messages of one topic, in the thread of the link: it must not wait."""
 
     def receive(self, message: Message) -> None:
-        """Take *message*, and see to it that it is acknowledged."""
+        """
+        Take *message*, and see to it that it is acknowledged.
+
+        Raises:
+            NoRoomError: it is to come again later.
+        """
 
 
 class MqttHub:
@@ -121,6 +126,11 @@ class MqttHub:
         """Return how the link to *broker* is doing; None where there is none."""
         line = self._lines.get(broker)
         return line.link.health if line is not None and line.link is not None else None
+
+    def link(self, broker: str) -> MqttLink | None:
+        """Return the link to *broker*; None where there is none."""
+        line = self._lines.get(broker)
+        return line.link if line is not None else None
 
     def unclaimed(self, broker: str) -> int:
         """Return how many messages came on topics that nobody has claimed."""

@@ -14,10 +14,13 @@ from humbell.sources.counters import SourceCounters, Tally
 from humbell.sources.hub import MqttHub
 from humbell.sources.repeats import Repeats
 from humbell.sources.settings import MAX_RATE_HZ, MIN_RATE_HZ
-from humbell.wire import BlockError, LinkHealth, Message, Note, decode
+from humbell.wire import BlockError, LinkHealth, Message, NoRoomError, Note, decode
 
-QUEUE_BYTES = 64 * 2**20  # bytes of one source's queue: some blocks of the largest size do not fill a small computer
-HELD_MESSAGES = 64  # four times what a broker sends ahead; more only where brokers forget sessions again and again
+# Bytes in one source's queue, and again held: blocks of the largest size do not fill a small computer.
+QUEUE_BYTES = 32 * 2**20
+# Messages. Brokers are told to send 16 ahead, but not all keep to it: Mosquitto 2.0.11 sends all that it has once a few
+# are acknowledged, and it has up to 1000 by default.
+HELD_MESSAGES = 1024
 
 
 class MqttSettings(BaseModel):
@@ -80,9 +83,10 @@ class MqttSource:
     """
     Delivers the blocks of one topic.
 
-    A message is acknowledged when it has a place in the queue. While the queue is full it is not, so that the broker
-    keeps it and, when it has sent some ahead, waits. Messages are read, and what breaks a rule is dropped and counted,
-    in the thread that calls `read`.
+    A message is acknowledged when it has a place in the queue. While the queue is full it is held and not acknowledged,
+    so that the broker keeps it and, when it has sent some ahead, waits; should it send more than can be held, the
+    connection is given up. In the thread that calls `read` messages are decoded, and what breaks a rule is dropped and
+    counted.
 
     Args:
         name: the source's id.
@@ -125,6 +129,7 @@ class MqttSource:
         self._queue: deque[_Arrival] = deque()
         self._queue_bytes = 0
         self._held: deque[_Arrival] = deque()
+        self._held_bytes = 0
         self._in_hand = 0
         self._open = False
         hub.claim(settings.broker, self._topic, self)
@@ -188,13 +193,15 @@ class MqttSource:
             if not self._held and self._has_room(message):
                 self._admit(arrival)
                 return
-            if message.qos and len(self._held) < HELD_MESSAGES:
+            if message.qos:
+                if len(self._held) >= HELD_MESSAGES or self._held_bytes + len(message.payload) > QUEUE_BYTES:
+                    raise NoRoomError
                 self._held.append(arrival)
+                self._held_bytes += len(message.payload)
                 return
             # The broker has no copy of a message of QoS 0.
             self._tally.receive()
             first = self._tally.drop("queue_full")
-            self._hub.ack(self._settings.broker, message)
         if first:
             self._tell("queue_full", "the queue is full and the broker cannot wait (publish with QoS 1)")
 
@@ -216,6 +223,7 @@ class MqttSource:
             self._queue_bytes -= len(arrival.message.payload)
             self._in_hand += 1
             while self._held and self._has_room(self._held[0].message):
+                self._held_bytes -= len(self._held[0].message.payload)
                 self._admit(self._held.popleft())
             return arrival
 

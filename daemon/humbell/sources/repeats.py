@@ -23,6 +23,10 @@ class Repeats:
         self._boots = boots
         self._runs: OrderedDict[str, _Run] = OrderedDict()
 
+    def __len__(self) -> int:
+        """Number of blocks that are remembered."""
+        return sum(len(run.seen) for run in self._runs.values())
+
     def judge(self, boot: str, seq: int) -> str | None:
         """Return ``duplicate``, or ``old_number`` for one that can no longer be told from a repetition, or None."""
         run = self._runs.get(boot)

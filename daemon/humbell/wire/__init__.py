@@ -2,9 +2,10 @@
 
 from humbell.wire.block import BlockError, decode, encode
 from humbell.wire.broker import BrokerSettings, TlsSettings
-from humbell.wire.errors import RefusedError
+from humbell.wire.errors import NoRoomError, RefusedError
 from humbell.wire.events import Message
-from humbell.wire.mqtt import LinkHealth, MqttLink, Note
+from humbell.wire.health import LinkHealth
+from humbell.wire.mqtt import MqttLink, Note
 
 __all__ = [
     "BlockError",
@@ -12,6 +13,7 @@ __all__ = [
     "LinkHealth",
     "Message",
     "MqttLink",
+    "NoRoomError",
     "Note",
     "RefusedError",
     "TlsSettings",

@@ -9,6 +9,26 @@ MOST_S = 8.0  # so that a link is up again within 10 s of the end of a fault
 PATIENT_S = 30.0
 
 
+BREAKS = 4  # in a row; a broker that is restarted is away between two of them
+BREAK_S = 60.0  # two nodes that throw each other out, each after `PATIENT_S` or twice that, stay below it
+
+
+class Breaks:
+    """Finds out that connections break again and again: some brokers do not say that another client has the same id."""
+
+    def __init__(self) -> None:
+        self._count = 0
+
+    def count(self, *, lasted_s: float) -> bool:
+        """Count a connection that broke after *lasted_s* for no known reason; return whether that is a habit by now."""
+        self._count = self._count + 1 if lasted_s < BREAK_S else 0
+        return self._count >= BREAKS
+
+    def reset(self) -> None:
+        """Begin anew: something else has happened in between."""
+        self._count = 0
+
+
 class Backoff:
     """
     Waiting times that double from try to try, each of them spread so that nodes do not come back all at once.

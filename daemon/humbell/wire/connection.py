@@ -110,9 +110,16 @@ class Connection:
         """The keep-alive time in force: the broker may have set another than ours; 0 for none."""
         return self._client.keepalive
 
-    def turn(self, wake: socket.socket, timeout_s: float) -> bool:
+    def turn(self, wake: socket.socket, timeout_s: float, *, reading: bool) -> bool:
         """
         Wait until there is something to read or write, or *wake* is readable, and read and write it.
+
+        Args:
+            wake: ends the wait.
+
+            timeout_s: longest wait.
+
+            reading: whether there is room for what may come in; otherwise the broker is left to wait, by TCP's means.
 
         Returns:
             Whether the broker sent something and the connection still stands. MQTT gives the answer to a ping no
@@ -123,9 +130,10 @@ class Connection:
             return False
         poll = select.poll()
         poll.register(wake.fileno(), select.POLLIN)
-        poll.register(own.fileno(), select.POLLIN | (select.POLLOUT if self._client.want_write() else 0))
+        events = (select.POLLIN if reading else 0) | (select.POLLOUT if self._client.want_write() else 0)
+        poll.register(own.fileno(), events)
         # Bytes that TLS has already decoded are in no socket any more.
-        ready = isinstance(own, ssl.SSLSocket) and own.pending() > 0
+        ready = reading and isinstance(own, ssl.SSLSocket) and own.pending() > 0
         found = dict(poll.poll(0 if ready else timeout_s * 1000)).get(own.fileno(), 0)
         heard = False
         if ready or found & ~select.POLLOUT:
@@ -161,6 +169,8 @@ class Connection:
         Raises:
             ValueError: no broker could take it.
         """
+        if not topic:
+            raise ValueError("the topic is empty")
         return self._client.publish(topic, payload, _QOS, retain).mid
 
     def close(self, *, politely: bool) -> None:

@@ -8,6 +8,14 @@ class RefusedError(HumbellError):
     """The broker will not take a message, now or later: do not send it again."""
 
 
+class NoRoomError(Exception):
+    """
+    Raised by what takes messages: this one finds no room.
+
+    It is offered again, and nothing is read meanwhile; when no room comes, the connection is given up.
+    """
+
+
 class LostError(Exception):
     """
     A connection has ended, or was given up.

@@ -8,16 +8,16 @@ import time
 from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import Future
 from contextlib import suppress
-from dataclasses import dataclass
 from itertools import count
 from typing import Protocol
 
 from humbell.model import OutOfReachError
 from humbell.wire import trouble
-from humbell.wire.backoff import Backoff
+from humbell.wire.backoff import Backoff, Breaks
 from humbell.wire.broker import BrokerSettings
 from humbell.wire.errors import CallbackError, LostError
 from humbell.wire.events import Message
+from humbell.wire.health import LinkHealth
 from humbell.wire.session import Callbacks, Session
 from humbell.wire.subscriptions import Subscriptions
 from humbell.wire.trouble import Trouble
@@ -38,30 +38,6 @@ class Note(Protocol):
         """Log *event*."""
 
 
-@dataclass(frozen=True, slots=True)
-class LinkHealth:
-    """
-    How a link is doing.
-
-    Args:
-        ready: the broker has let us in and answered all subscriptions.
-
-        confirmed_age_s: seconds since the last sign of life from the broker; None where there has been none.
-
-        trouble: why it does not work, and what to do; None where it does.
-
-        connections: that the broker has let in so far.
-
-        failures: exceptions in callbacks so far.
-    """
-
-    ready: bool
-    confirmed_age_s: float | None
-    trouble: str | None
-    connections: int
-    failures: int
-
-
 class MqttLink:
     """
     Keeps one connection to one broker, in a thread of its own.
@@ -79,7 +55,7 @@ class MqttLink:
         note: takes events for the log.
 
         receive: called in the link's thread with each message that comes in; must not wait. The message is to be
-            acknowledged with `ack`, then or later.
+            acknowledged with `ack`, then or later. May raise `NoRoomError`.
 
         connected: called in the link's thread when the broker has let us in, before the first message of that
             connection; its argument tells whether the broker still had our session, so that all that was not
@@ -127,6 +103,7 @@ class MqttLink:
         self._stopping = threading.Event()
         self._sleep = self._stopping.wait if sleep is None else sleep
         self._backoff = Backoff(rand)
+        self._breaks = Breaks()
         self._thread = threading.Thread(target=self._run, name=f"mqtt {name}", daemon=True)
         self._subscriptions = Subscriptions()
         self._lock = threading.Lock()  # holds the socket open while it is written to
@@ -242,6 +219,10 @@ class MqttLink:
             why = self._failed(error.where, error.error)
         except Exception as error:  # noqa: BLE001 - the task's edge: counted, told, and begun anew
             why = self._failed("the loop", error)
+        if not why.unexplained or session is None or session.accepted_s is None:
+            self._breaks.reset()
+        elif self._breaks.count(lasted_s=self._clock() - session.accepted_s):
+            why = trouble.habit(self._settings, self._client_id)
         if why is not _LEAVING and self._trouble != why.text:
             self._note("mqtt_lost", trouble=why.text)
         self._trouble = why.text

@@ -2,6 +2,7 @@
 
 import socket
 import threading
+from collections import deque
 from collections.abc import Callable
 from concurrent.futures import Future
 from contextlib import suppress
@@ -11,7 +12,7 @@ from typing import TYPE_CHECKING
 from humbell.model import OutOfReachError
 from humbell.wire import trouble
 from humbell.wire.broker import BrokerSettings
-from humbell.wire.errors import CallbackError, LostError, RefusedError
+from humbell.wire.errors import CallbackError, LostError, NoRoomError, RefusedError
 from humbell.wire.events import Answered, Ended, Event, Message, Published, Subscribed
 from humbell.wire.subscriptions import Subscriptions
 from humbell.wire.trouble import Trouble
@@ -19,7 +20,9 @@ from humbell.wire.trouble import Trouble
 if TYPE_CHECKING:
     from humbell.wire.connection import Connection
 
-ANSWER_S = 5.0  # for the answers to CONNECT and SUBSCRIBE; with the connect itself below 15 s
+ANSWER_S = 5.0  # for the answer to CONNECT; with the connect itself below 15 s
+SUBSCRIBED_S = 10.0  # for the answer to SUBSCRIBE, behind which a broker may first send what it has kept
+FULL_S = 5.0  # for room to come; while we do not read, pings find no answer, which must come within the keep-alive time
 _TURN_S = 0.5  # how often deadlines are looked at
 _GRACE_S = 2.0  # between paho's own deadline for a ping and ours
 
@@ -94,6 +97,8 @@ class Session:
         self._outgoing: list[int | _Outgoing] = []
         self._pending: dict[int, Future[None]] = {}
         self._over: Trouble | None = None
+        self._events: deque[Event] = deque()
+        self._full_s: float | None = None
         self._heard_s = self._opened_s = clock()
 
     def open(self) -> None:
@@ -120,13 +125,14 @@ class Session:
             CallbackError: a callback failed; the connection is not to be used any more.
         """
         self.send()
-        if self._connection.turn(wake, _TURN_S):
+        self._work()
+        if self._connection.turn(wake, _TURN_S, reading=not self._events):
             self._heard_s = self._clock()
             self._callbacks.heard()
         with suppress(BlockingIOError):
             wake.recv(4096)
-        for event in self._connection.take():
-            self._handle(event)
+        self._events.extend(self._connection.take())
+        self._work()
         if self._connection.failure is not None:
             raise CallbackError(*self._connection.failure)
         self._check()
@@ -190,6 +196,19 @@ class Session:
         else:
             self._pending[mid] = item.done
 
+    def _work(self) -> None:
+        while self._events:
+            try:
+                self._handle(self._events[0])
+            except NoRoomError as error:
+                now_s = self._clock()
+                self._full_s = now_s if self._full_s is None else self._full_s
+                if now_s - self._full_s > min(FULL_S, self._settings.keepalive_s / 2):
+                    raise LostError(trouble.NO_ROOM) from error
+                return
+            self._full_s = None
+            self._events.popleft()
+
     def _handle(self, event: Event) -> None:
         match event:
             case Message():
@@ -226,8 +245,8 @@ class Session:
             raise LostError(self._end(Ended(None, "")))
         if self.accepted_s is None and now_s - self._opened_s > ANSWER_S:
             raise LostError(trouble.silent("answer", ANSWER_S, self._settings))
-        if self._subscriptions.overdue(now_s, ANSWER_S):
-            raise LostError(trouble.silent("answer to a subscription", ANSWER_S, self._settings))
+        if self._full_s is None and self._subscriptions.overdue(now_s, SUBSCRIBED_S):
+            raise LostError(trouble.silent("answer to a subscription", SUBSCRIBED_S, self._settings))
         keepalive_s = self._connection.keepalive_s
         if keepalive_s and now_s - self._heard_s > 2 * keepalive_s + _GRACE_S:
             raise LostError(trouble.silent("sign of life", round(now_s - self._heard_s), self._settings))
@@ -235,5 +254,7 @@ class Session:
     def _call(self, where: str, callback: Callable[..., None], *args: object) -> None:
         try:
             callback(*args)
+        except NoRoomError:
+            raise
         except Exception as error:
             raise CallbackError(where, error) from error

@@ -20,11 +20,16 @@ class Trouble:
         text: one line.
 
         patient: only a person can cure it, so asking often is of no use.
+
+        unexplained: a connection that stood has broken, and nobody has said why.
     """
 
     text: str
     patient: bool = False
+    unexplained: bool = False
 
+
+NO_ROOM = Trouble("blocks come in faster than they are measured, so the broker has to keep them (look at the load)")
 
 # OpenSSL, x509_vfy.h: X509_V_ERR_*.
 _NOT_YET_VALID, _EXPIRED, _OTHER_HOST, _OTHER_ADDRESS = 9, 10, 62, 64
@@ -74,9 +79,7 @@ def refused(reason: Reason, settings: BrokerSettings, client_id: str) -> Trouble
         case 0x85:
             return Trouble(f"{at}: the broker does not take the client id {client_id} (allow it there)", patient=True)
         case 0x86 | 0x87 | 0x8C:
-            who = f"user {settings.user!r}" if settings.user else "us without a user"
-            text = f"{at}: the broker does not let in {who}: {reason.name.lower()} (correct user and password)"
-            return Trouble(text, patient=True)
+            return Trouble(f"{at}: {_not_let_in(settings)}: {reason.name.lower()} {_remedy(settings)}", patient=True)
         case 0x8A:
             return Trouble(f"{at}: the broker has banned us (lift that there)", patient=True)
         case 0x88 | 0x89 | 0x97 | 0x9F:
@@ -102,10 +105,11 @@ def ended(event: Ended, settings: BrokerSettings, client_id: str) -> Trouble:
     """Return what it means that a connection that stood has ended."""
     at = settings.address
     if event.reason is None:
-        return Trouble(f"{at}: the connection broke{f': {event.detail}' if event.detail else ''} (look at the broker)")
+        detail = f": {event.detail}" if event.detail else ""
+        return Trouble(f"{at}: the connection broke{detail} (look at the broker)", unexplained=True)
     match event.reason.code:
         case 0x8E:
-            text = f"{at}: another client has the same id {client_id} (give each node an id of its own)"
+            text = f"{at}: another client has the same id, {client_id} (give each node an id of its own)"
             return Trouble(text, patient=True)
         case 0x8B:
             return Trouble(f"{at}: the broker is shutting down (start it again)")
@@ -115,6 +119,12 @@ def ended(event: Ended, settings: BrokerSettings, client_id: str) -> Trouble:
             text = f"{at}: the broker has thrown us out: {event.reason.name.lower()} (its log says more)"
             return Trouble(text, patient=True)
     return Trouble(f"{at}: the broker ended the connection: {event.reason.name.lower()} (its log says more)")
+
+
+def habit(settings: BrokerSettings, client_id: str) -> Trouble:
+    """Return what it means that connections break again and again."""
+    text = f"the connection breaks again and again (look whether another client has the same id, {client_id})"
+    return Trouble(f"{settings.address}: {text}", patient=True)
 
 
 def silent(what: str, after_s: float, settings: BrokerSettings) -> Trouble:
@@ -131,6 +141,20 @@ def not_subscribed(denied: Iterable[tuple[str, Reason]], settings: BrokerSetting
     reasons = ", ".join(sorted({reason.name.lower() for reason in found.values()}))
     who = f"user {settings.user!r}" if settings.user else "this client"
     return f"{settings.address}: the broker denies us {topics}: {reasons} (let {who} subscribe to it there)"
+
+
+def _not_let_in(settings: BrokerSettings) -> str:
+    if settings.user:
+        return f"the broker does not let in user {settings.user!r}"
+    if settings.tls and settings.tls.certificate:
+        return "the broker does not let in our certificate"
+    return "the broker lets nobody in without a user"
+
+
+def _remedy(settings: BrokerSettings) -> str:
+    if settings.user:
+        return "(correct user and password)"
+    return "(allow it there)" if settings.tls and settings.tls.certificate else "(give user and password)"
 
 
 def _unreached(error: OSError, settings: BrokerSettings) -> str:

@@ -108,7 +108,7 @@ def test_every_default_stands_in_the_example_as_a_commented_out_line() -> None:
 
 
 def test_the_example_carries_the_cautions() -> None:
-    """What Humbell is not, who decides on limits, and how sensors are fitted, as the design's first section has it."""
+    """What Humbell is not, who decides on limits, and how sensors are fitted."""
     prose = " ".join(NODE.replace("#", " ").split()).lower()
     for words in (
         "it is no machine protection system",
