@@ -30,9 +30,7 @@ def make_sources(site: Site) -> list[Source]:
         elif not isinstance(settings, ReplaySettings):  # which plays files when it is asked to
             sources.append(found[settings.kind].create(name, settings, time.monotonic, time.time_ns))
     if not sources:
-        raise ConfigError(
-            "sources: none is live, humbell replay plays recordings (add one of another kind)"
-        )
+        raise ConfigError("sources: none is live, humbell replay plays recordings (add one of another kind)")
     return sources
 
 
