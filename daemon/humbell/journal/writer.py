@@ -17,8 +17,6 @@ from humbell.journal.reader import ends
 from humbell.journal.settings import JournalSettings
 from humbell.model import AlarmId, Measure, Moment, PointId, Reading, Transition
 
-_HOUR_NS = 3600 * 10**9
-
 
 @dataclass(frozen=True, slots=True)
 class Watched:
@@ -195,7 +193,7 @@ class Journal:
             )
             coverage.store(db, start_ns, numbers, accounts)
             alarms.checkpoint(db, seq, max(chunk.end_ns for chunk in chunks), states)
-            retention.roll_up(db, start_ns // _HOUR_NS * _HOUR_NS)
+            retention.roll_up(db, start_ns)
             return numbers, series
 
         numbers, series = disk.write(work)
