@@ -1,5 +1,6 @@
 """One paho client from its connect to its end. Lives in one thread; its callbacks only enqueue."""
 
+import os
 import select
 import socket
 import ssl
@@ -20,6 +21,9 @@ from humbell.wire.broker import BrokerSettings, TlsSettings
 from humbell.wire.events import Answered, Ended, Event, Message, Published, Reason, Subscribed
 
 CONNECT_S = 5.0  # for each of the host's addresses, and for the TLS handshake
+LEAVE_S = 1.0  # for the broker to hang up when we take leave
+_READ_BYTES = 65_536
+_LEAVE_READS = 1000  # more than any system keeps unread for one connection
 # Bytes. Twice the largest block: what is a little too large comes in and is counted, what is absurd does not.
 MOST_BYTES = 16 * 2**20
 _QOS = 1
@@ -174,10 +178,18 @@ class Connection:
         return self._client.publish(topic, payload, _QOS, retain).mid
 
     def close(self, *, politely: bool) -> None:
-        """End it; *politely* tells the broker, as far as that is possible without waiting."""
-        if politely and self.alive:
-            self._client.disconnect()
-        if (own := self._client.socket()) is not None:
+        """End it; *politely* tells the broker, and waits a moment for it to hang up, having read all that was sent."""
+        own = self._client.socket()
+        if own is not None and politely:
+            # paho closes its own end at once, and what the broker has not read by then may be lost.
+            with socket.socket(fileno=os.dup(own.fileno())) as line, suppress(OSError):
+                self._client.disconnect()
+                line.settimeout(LEAVE_S)
+                for _ in range(_LEAVE_READS):
+                    if not line.recv(_READ_BYTES):
+                        break
+            own = self._client.socket()
+        if own is not None:
             own.close()
 
     def on_connect(
