@@ -66,6 +66,7 @@ class Intake:
         self._blocks = blocks
         self._state = "opening"
         self._trouble = ""
+        self._told = ""
         self._count = 0
         self._seconds = 0.0
         self._last_ns: int | None = None
@@ -135,7 +136,8 @@ class Intake:
         self._source.open()
         self._state, self._trouble = "open", ""
         self._opened += 1
-        _log.info("source_open", source=self.name)
+        if not self._told:
+            _log.info("source_open", source=self.name)
 
     def _hand_on(self) -> bool:
         block = self._waiting or self._source.read(_TURN_S)
@@ -147,15 +149,16 @@ class Intake:
             self._count += 1
             self._seconds += block.length / block.rate_hz
             self._last_ns = time.monotonic_ns()
-            self._pause_s = _FIRST_PAUSE_S
+            self._pause_s, self._told = _FIRST_PAUSE_S, ""
         return True
 
     def _lose(self, trouble: str) -> None:
         if self.task.stopping:
             return
-        if trouble != self._trouble:
+        # Once, until blocks come again: some can be opened again and again, and never read.
+        if trouble != self._told:
             _log.warning("source_away", source=self.name, trouble=trouble, again_in_s=self._pause_s)
-        self._state, self._trouble = "away", trouble
+        self._state, self._trouble, self._told = "away", trouble, trouble
         self._source.close()
         self.task.wait(self._pause_s)
         self._pause_s = min(2 * self._pause_s, _LONGEST_PAUSE_S)

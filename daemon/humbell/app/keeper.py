@@ -94,9 +94,9 @@ class Keeper:
         self._states: Mapping[AlarmId, AlarmState] = {}
         self._since_ns: int | None = None
         self._trouble = ""
+        self._shortage = ""
         self._failures = 0
         self._dropped_readings = 0
-        self._closed = False
         self.put_aside = ""
         self.task = Task("journal", self._turn)
 
@@ -133,14 +133,24 @@ class Keeper:
             answer.cancel()
             raise
 
-    def finish(self) -> None:
-        """Write all that waits, once the task has ended."""
+    def finish(self) -> bool:
+        """Write all that waits, once the task has ended; return whether it could be written."""
         while (batch := self._batches.get(0.0)) is not None:
             self._take(batch)
-        self._tell()
-        self._journal.commit(self._states)
-        self._journal.close()
-        self._closed = True
+        try:
+            self._tell()
+            self._journal.commit(self._states)
+        except sqlite3.Error as error:
+            _log.error(
+                "journal_lost",
+                trouble=self._explain(error),
+                transitions=len(self._untold),
+                pending_s=self._journal.pending_s,
+            )
+            return False
+        finally:
+            self._journal.close()
+        return True
 
     @property
     def state(self) -> JournalState:
@@ -148,7 +158,7 @@ class Keeper:
         path = self._journal.settings.path
         sizes = [part.stat().st_size for part in (path, path.with_name(path.name + "-wal")) if part.exists()]
         last = self._journal.last_commit
-        trouble = self._trouble
+        trouble = self._trouble or self._shortage
         if not trouble and len(sizes) > 1 and sizes[1] > _WAL_BYTES:
             trouble = (
                 f"the write-ahead log has grown to {sizes[1] / 2**20:.0f} MiB: a program keeps a read open "
@@ -167,13 +177,14 @@ class Keeper:
         )
 
     def _turn(self) -> bool:
-        batch = self._batches.get(_TURN_S if not self._untold else 0.0)
+        # While nothing can be written, what comes waits in the queue: that has a bound.
+        batch = None if self._trouble else self._batches.get(_TURN_S)
         if batch is not None:
             self._take(batch)
         try:
             self._tell()
             self._do_deeds()
-            if self._is_due():
+            if self._is_due() or self._trouble:
                 self._journal.commit(self._states)
                 self._since_ns = None
         except sqlite3.Error as error:
@@ -182,6 +193,7 @@ class Keeper:
             if self._trouble:
                 _log.info("journal_recovered", failures=self._failures)
             self._trouble = ""
+            self._note_shortage()
         return True
 
     def _take(self, batch: Batch) -> None:
@@ -215,8 +227,17 @@ class Keeper:
 
     def _fail(self, error: sqlite3.Error) -> None:
         self._failures += 1
-        trouble = f"{self._journal.settings.path}: the journal cannot be written: {error} (check space and disk)"
+        trouble = self._explain(error)
         if trouble != self._trouble:
             _log.error("journal_away", trouble=trouble)
         self._trouble = trouble
         self.task.wait(_PAUSE_S)
+
+    def _note_shortage(self) -> None:
+        shortage = self._journal.trouble
+        if shortage and not self._shortage:
+            _log.error("journal_short_of_room", trouble=shortage)
+        self._shortage = shortage
+
+    def _explain(self, error: sqlite3.Error) -> str:
+        return f"{self._journal.settings.path}: the journal cannot be written: {error} (check space and disk)"

@@ -107,6 +107,9 @@ class Line:
         Raises:
             ConfigError: see `prepare`.
         """
+        kind = SignalKind.of(block)
+        # Before all else: a block that cannot be measured leaves all as it is, and so will be missed by the next one.
+        bank = self._bank if self._bank is not None and kind == self._kind else self.prepare(kind)
         join = self._continuity.feed(block)
         if join.join in _DROPPED:
             return []
@@ -114,9 +117,6 @@ class Line:
         if fresh is None:
             self.late_blocks += 1
             return []
-        kind = SignalKind.of(fresh)
-        # Before anything is told: a block that cannot be measured leaves all as it is.
-        bank = self._bank if self._bank is not None and kind == self._kind else self.prepare(kind)
         readings: list[Reading] = []
         if self._bank is None:
             readings += self._before_the_first(fresh.start_ns)

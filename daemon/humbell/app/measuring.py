@@ -60,6 +60,7 @@ class Measuring:
         self._now = now
         self._acts: BoundedQueue[tuple[AlarmId, Event, Future[Transition | None]]] = BoundedQueue("commands", 64)
         self._told_silent_ns: dict[str, int] = {}
+        self._unusable_since_ns: dict[str, int] = {}
         self._ended: set[str] = set()
         self.unusable: dict[str, int] = defaultdict(int)
         self.troubles: dict[str, str] = {}
@@ -109,13 +110,14 @@ class Measuring:
         except ConfigError as error:
             self.unusable[block.source] += 1
             trouble = "; ".join(error.problems)
+            self._unusable_since_ns.setdefault(block.source, time.monotonic_ns())
             if self.troubles.get(block.source) != trouble:
                 _log.warning("blocks_unusable", source=block.source, trouble=trouble)
             self.troubles[block.source] = trouble
         else:
             self.measured_blocks += line.refused_blocks == refused
-            self.troubles.pop(block.source, None)
-        self._told_silent_ns.pop(block.source, None)
+            for noted in (self.troubles, self._unusable_since_ns, self._told_silent_ns):
+                noted.pop(block.source, None)
 
     def _look_for_silence(self) -> None:
         mono_ns = time.monotonic_ns()
@@ -126,9 +128,11 @@ class Measuring:
                     self._hand_on(self._chain.end(intake.name))
                 continue
             told_ns = self._told_silent_ns.get(intake.name, 0)
-            if intake.silent_s < SILENCE_S or mono_ns - told_ns < _SILENCE_EVERY_S * 1e9:
+            # Blocks that cannot be measured are as good as none.
+            unusable_s = (mono_ns - self._unusable_since_ns.get(intake.name, mono_ns)) / 1e9
+            if max(intake.silent_s, unusable_s) < SILENCE_S or mono_ns - told_ns < _SILENCE_EVERY_S * 1e9:
                 continue
-            if not told_ns:
+            if not told_ns and intake.silent_s >= SILENCE_S:
                 _log.warning("source_silent", source=intake.name, since_s=round(intake.silent_s, 1))
             self._told_silent_ns[intake.name] = mono_ns
             self._hand_on(self._chain.silence(intake.name, self._now().utc_ns))

@@ -83,9 +83,7 @@ class Service:
         else:
             clean = False
         self.keeper.task.stop()
-        if self.keeper.task.join(_STOP_S):
-            self.keeper.finish()
-        else:
+        if not (self.keeper.task.join(_STOP_S) and self.keeper.finish()):
             clean = False
         _log.info("stopped", clean=clean)
         return clean
