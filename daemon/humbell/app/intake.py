@@ -101,6 +101,12 @@ class Intake:
         """Let go of the source; ends a read that waits."""
         self._source.close()
 
+    def rest(self) -> list[Block]:
+        """Return the blocks that have come and were not handed on, once the task has ended and the source is closed."""
+        waiting = [] if self._waiting is None else [self._waiting]
+        left = getattr(self._source, "rest", None)
+        return waiting + (list(left()) if callable(left) else [])
+
     @property
     def state(self) -> SourceState:
         """How it is doing."""

@@ -91,6 +91,8 @@ class Measuring:
         while (block := self._blocks.get(0.0)) is not None:
             self._measure(block)
         for intake in self._intakes:
+            for left in intake.rest():
+                self._measure(left)
             self._hand_on(self._chain.end(intake.name))
 
     def _turn(self) -> bool:

@@ -184,6 +184,15 @@ class MqttSource:
             self._open = False
         self._hub.close(self._settings.broker, self._topic)
 
+    def rest(self) -> list[Block]:
+        """Return what was acknowledged and not read by the time the source was closed; nobody sends it again."""
+        blocks = []
+        while (arrival := self._take(0.0)) is not None:
+            block = self._judge(arrival)
+            if block is not None:
+                blocks.append(block)
+        return blocks
+
     def receive(self, message: Message) -> None:
         """Take *message*, in the link's thread."""
         arrival = _Arrival(message, self._clock(), self._utc_ns())

@@ -2,7 +2,7 @@
 
 import io
 import json
-import math
+import sys
 from collections.abc import Mapping
 from typing import Any, NoReturn
 
@@ -20,6 +20,8 @@ MAX_SECONDS = 10.0
 # UTC ns of the year 2262, where signed 64-bit nanoseconds end; sequence numbers share the bound.
 _MAX_INT = 2**63 - 1
 _MAX_TEXT = 64
+_MAX_FLOAT = sys.float_info.max
+_MAX_ITEMS = 256  # a block has about 25, and 64 more with a bias voltage for each channel
 
 _MULTI_DIMENSIONAL = 40  # row-major array, RFC 8746 section 3.1.1
 # Little-endian typed arrays, RFC 8746 section 2.1.
@@ -89,7 +91,7 @@ def decode(payload: bytes, source: str) -> Block:
         raise BlockError("unknown_key", f"unknown keys: {', '.join(sorted(map(repr, unknown)))[:100]}")
     if missing := _REQUIRED - fields.keys():
         raise BlockError("missing_key", f"missing keys: {', '.join(sorted(missing))}")
-    if fields["v"] != VERSION or isinstance(fields["v"], bool):
+    if type(fields["v"]) is not int or fields["v"] != VERSION:
         raise BlockError("version", f"version {fields['v']!r:.20} is not {VERSION}")
     samples = _samples(fields["x"])
     rate_hz = _number(fields, "fs", MIN_RATE_HZ, MAX_RATE_HZ)
@@ -113,9 +115,16 @@ def decode(payload: bytes, source: str) -> Block:
 
 def _from_json(payload: bytes) -> object:
     try:
-        return json.loads(payload, parse_constant=_refuse_constant)
+        return json.loads(payload, parse_constant=_refuse_constant, object_pairs_hook=_once)
     except (ValueError, RecursionError):
         raise BlockError("no_json", "the payload begins like JSON but is none") from None
+
+
+def _once(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
+    found = dict(pairs)
+    if len(found) != len(pairs):
+        raise ValueError("a key comes twice")
+    return found
 
 
 def _refuse_constant(name: str) -> NoReturn:
@@ -123,6 +132,7 @@ def _refuse_constant(name: str) -> NoReturn:
 
 
 def _from_cbor(payload: bytes) -> object:
+    _check_items(payload)
     stream = io.BytesIO(payload)
     try:
         decoded = cbor2.CBORDecoder(
@@ -138,6 +148,19 @@ def _from_cbor(payload: bytes) -> object:
     if stream.read(1):
         raise BlockError("trailing", "bytes stand behind the end of the block")
     return decoded
+
+
+def _check_items(payload: bytes) -> None:
+    # The decoder builds all that is there before we see any of it, and a byte for an empty list becomes 64 in memory.
+    position = 0
+    for _ in range(_MAX_ITEMS):
+        if position >= len(payload):
+            return
+        major, info = divmod(payload[position], 32)
+        more = 1 << (info - 24) if 24 <= info <= 27 else 0  # noqa: PLR2004 - RFC 8949, section 3
+        argument = int.from_bytes(payload[position + 1 : position + 1 + more], "big") if more else info
+        position += 1 + more + (argument if major in (2, 3) else 0)
+    raise BlockError("no_cbor", f"the payload has more than {_MAX_ITEMS} items")
 
 
 def _check_tag(tag: cbor2.CBORTag, *_: object) -> cbor2.CBORTag:
@@ -227,7 +250,8 @@ def _aux(value: object) -> dict[str, float]:
     for key, one in value.items():
         numbers = one if isinstance(one, list) and key == "bias_V" and len(one) <= MAX_CHANNELS else [one]
         for index, number in enumerate(numbers):
-            if type(number) not in (int, float, bool) or not math.isfinite(number):
+            # Compared, not converted: JSON knows integers that no float can hold.
+            if type(number) not in (int, float, bool) or not -_MAX_FLOAT <= number <= _MAX_FLOAT:
                 raise BlockError("aux", f"aux.{key} is no number")
             found[key if numbers == [one] else f"{key}/{index}"] = float(number)
     return found

@@ -57,7 +57,9 @@ class Bench:
     """A task with all that is around it, turned by hand, with a clock that stands still until it is set."""
 
     now_s: float = 0.0
-    intake: SimpleNamespace = field(default_factory=lambda: SimpleNamespace(name="tape", ended=False, silent_s=0.0))
+    intake: SimpleNamespace = field(
+        default_factory=lambda: SimpleNamespace(name="tape", ended=False, silent_s=0.0, rest=list)
+    )
     batches: list[Batch] = field(default_factory=list)
     board: Board = field(default_factory=Board)
     blocks: BoundedQueue[Block] = field(default_factory=lambda: BoundedQueue("blocks", 99))
@@ -238,9 +240,10 @@ def test_a_command_that_was_given_up_is_not_done_later(bench: Bench) -> None:
 
 
 def test_the_end_measures_what_still_waits(bench: Bench) -> None:
-    """No block that has come so far is lost by a stop."""
-    for seq in range(6):
+    """No block that has come so far is lost by a stop, be it in our queue or still in the source's."""
+    for seq in range(4):
         assert bench.blocks.put(block(seq), 0.0)
+    bench.intake.rest = lambda: [block(4), block(5)]
     bench.measuring.finish()
     assert bench.lived == [(1, 1, Cause.SETTLING), (1.5, 0.5, Cause.INCOMPLETE)]
     assert bench.measuring.measured_blocks == 6

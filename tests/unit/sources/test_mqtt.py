@@ -172,6 +172,17 @@ def test_a_message_is_acknowledged_when_it_has_its_place_in_the_queue() -> None:
     assert bench.source.counters.dropped == {}
 
 
+def test_what_was_acknowledged_can_be_had_after_the_end() -> None:
+    """The broker has forgotten it, so it must not be forgotten here."""
+    bench = Bench()
+    for seq in (0, 1, 1):
+        bench.give(payload(seq))
+    bench.source.close()
+    assert [block.seq for block in bench.source.rest()] == [0, 1]
+    assert bench.source.rest() == []
+    assert bench.source.counters.balanced
+
+
 def test_what_is_held_is_acknowledged_on_the_connection_in_force() -> None:
     """After a reconnect the broker sends it again under another number; it is measured once, in its place."""
     bench = Bench(queue_blocks=1)
