@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from humbell.alarms import Event, follow
 from humbell.app.board import Board
 from humbell.journal import Deed
-from humbell.model import Action, AlarmId, AlarmType, Command, LifeCycle, Measure, Transition
+from humbell.model import Action, AlarmId, AlarmType, Command, Measure, Transition
 
 # A person waits for the answer; a disk that hangs for longer is told as such.
 _WAIT_S = 5.0
@@ -84,8 +84,3 @@ def _alarm(command: Command) -> AlarmId | None:
         return AlarmId(command.machine, command.point, Measure(measure), AlarmType(kind)) if dot else None
     except ValueError:
         return None
-
-
-def needs_attention(life_cycle: LifeCycle) -> bool:
-    """Return whether an alarm in that state is to be told to whoever looks: anything but normal."""
-    return life_cycle is not LifeCycle.NORMAL

@@ -1,7 +1,7 @@
 """From blocks to readings: frames, bands, overalls, and what makes a frame untrustworthy."""
 
 from humbell.measures.bank import Bank
-from humbell.measures.base import BandPlan, Measurer, PointPlan
+from humbell.measures.base import BandPlan, PointPlan
 from humbell.measures.overall import MEASURES
 from humbell.measures.piece import lowest_edge_hz
 from humbell.measures.response import SAMPLES_PER_PERIOD, Band, Quantity, analogue, band_problem, highest_edge_hz
@@ -15,7 +15,6 @@ __all__ = [
     "BandPlan",
     "BandSettings",
     "Bank",
-    "Measurer",
     "PointPlan",
     "Quantity",
     "VelocityBand",

@@ -1,11 +1,9 @@
-"""What the measures are asked to do for one point, and the contract of what does it."""
+"""What the measures are asked to do for one point."""
 
-from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol
 
 from humbell.measures.response import Band
-from humbell.model import Block, PointId, Reading
+from humbell.model import PointId
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,15 +40,3 @@ class PointPlan:
     channel: int
     gain: float
     bands: tuple[BandPlan, ...]
-
-
-class Measurer(Protocol):
-    """Turns the blocks of one source into readings."""
-
-    def feed(self, block: Block) -> Sequence[Reading]:
-        """Return the readings that *block*, which follows on the one before it, makes possible."""
-        ...
-
-    def reset(self, missing_s: float, end_ns: int) -> Sequence[Reading]:
-        """End the stream here: what comes next does not follow on it."""
-        ...
