@@ -21,6 +21,9 @@ _STEPS = 2000
 # coarse for the last bits of computed values, which differ by chance.
 _GRID = 2.0**-26
 
+# So many pairs of neighbours of single hits are remembered; with fewer the verdict stands already.
+_BESIDE = 64
+
 
 class Rails:
     """
@@ -28,7 +31,8 @@ class Rails:
 
     Without a known full scale, a rail shows by isolated or chained samples of one same extreme value, while other
     values do not repeat and hardly any come near. A signal that repeats itself as a whole (a computed sine, a record
-    played in a loop) is not taken for clipped. The first two hits pass unseen.
+    played in a loop) is not taken for clipped: there single hits have the same neighbours. The first two hits pass
+    unseen.
 
     Args:
         full_scale: (channels,) magnitude of the rail in the unit of the samples; NaN where it is unknown.
@@ -77,6 +81,7 @@ class _Extreme:
         self._next = -np.inf
         self._near = 0
         self._grid = 0.0
+        self._beside: set[tuple[float, float]] = set()
         self._smallest_step = 0.0
 
     def hits_in(self, samples: Signal, extreme: float, span: float) -> int:
@@ -97,18 +102,33 @@ class _Extreme:
             return 0
         value = np.round(samples.astype(np.float64) * (self._sign / self._grid))
         following = float(np.max(value, where=value < extreme, initial=-np.inf))
-        here = int(np.count_nonzero(value == extreme))
+        here = np.flatnonzero(value == extreme)
+        if extreme > outermost:
+            self._beside.clear()
+        hits = self._new_hits(value, here) if extreme >= outermost else here.size
         top, reach = max(extreme, outermost), _NEAR * span / self._grid
         if extreme > outermost:
             self._near = self._near + self._seen[outermost] if extreme - outermost < reach else 0
         self._near += int(np.count_nonzero((value >= top - reach) & (value < top)))
-        for level, count in ((extreme, here), (following, int(np.count_nonzero(value == following)))):
+        for level, count in ((extreme, hits), (following, int(np.count_nonzero(value == following)))):
             self._seen[level] = self._seen.get(level, 0) + count
         self._seen = dict(sorted(self._seen.items(), reverse=True)[:2])
         self._next = min(self._seen)
         if extreme < top or not self._is_rail() or not self._is_fine(value):
             return 0
-        return here
+        return here.size
+
+    def _new_hits(self, value: NDArray[np.float64], here: NDArray[np.intp]) -> int:
+        """Return how many hits are not repetitions: single ones between two values that have not been seen there."""
+        chained = np.isin(here - 1, here) | np.isin(here + 1, here)
+        padded = np.concatenate([[np.inf], value, [np.inf]])
+        count = int(np.count_nonzero(chained))
+        for i in here[~chained].tolist():
+            beside = (float(padded[i]), float(padded[i + 2]))
+            if beside not in self._beside and len(self._beside) < _BESIDE:
+                self._beside.add(beside)
+                count += 1
+        return count
 
     def _is_rail(self) -> bool:
         hits = self._seen[max(self._seen)]

@@ -114,6 +114,17 @@ def test_computed_waves_are_never_called_clipped(figure: Callable[[str, str], No
     assert not any(called.values())
 
 
+def test_a_loop_of_noise_under_a_wave_that_swells_is_never_called_clipped() -> None:
+    """Some of its frames come thrice and others once, so the extreme repeats alone; its neighbours repeat with it."""
+    loop = np.random.default_rng(5).normal(0, 0.01, (16, 8, 128))[:, 1]
+    wave = 2 * np.pi * 0.04 * np.sqrt(2) * np.cos(2 * np.pi * 10 * np.arange(128) / 128)
+    rails = Rails(np.array([np.nan]))
+    for first in range(150, 226, 4):
+        blocks = [(1.0 if k / 4 % 39 < 9 else 6.0) * wave + loop[k % 16] for k in range(first, first + 4)]
+        frame = np.concatenate(blocks)[None].astype(np.float32)
+        assert rails.count(frame, frame.min(axis=1), frame.max(axis=1), np.array([True])).tolist() == [0]
+
+
 @pytest.mark.parametrize("kind", TYPES[1:])
 def test_a_record_played_in_a_loop_is_never_called_clipped(kind: str) -> None:
     """A signal that repeats as a whole repeats its extreme once in each loop, and its other values too."""
