@@ -7,7 +7,7 @@ import pytest
 
 from humbell.alarms import AlarmState, Event
 from humbell.app.board import Board
-from humbell.app.submit import Answer, Submit, needs_attention
+from humbell.app.submit import Answer, Submit
 from humbell.journal import Deed
 from humbell.model import Action, AlarmId, AlarmType, Command, LifeCycle, Measure, Transition
 
@@ -125,9 +125,3 @@ def test_what_changed_meanwhile_is_told_as_not_done() -> None:
     desk = Desk(LifeCycle.UNACKNOWLEDGED, acts=False)
     answer = desk(COMMAND)
     assert (answer.done, answer.seq) == (False, 17)
-
-
-@pytest.mark.parametrize("state", list(LifeCycle))
-def test_anything_but_normal_needs_attention(state: LifeCycle) -> None:
-    """Acknowledged and latched alarms, too."""
-    assert needs_attention(state) is (state != "normal")
