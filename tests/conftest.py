@@ -14,6 +14,7 @@ THREAD_GRACE_S = 1.0  # a thread that was told to stop needs a moment to come to
 RECORD_SUFFIXES = {".npz", ".wav"}  # beside them lie their descriptions
 
 _FIGURES = pytest.StashKey[list[tuple[str, str]]]()
+_WAITED = pytest.StashKey[float]()
 
 # The same examples everywhere and every time: what failed on one computer fails on the next one too.
 hypothesis.settings.register_profile("humbell", derandomize=True, deadline=None, database=None)
@@ -66,6 +67,24 @@ def pytest_make_collect_report() -> Generator[None, pytest.CollectReport, pytest
     return report
 
 
+@pytest.hookimpl(wrapper=True)
+def pytest_runtest_call(item: pytest.Item) -> Generator[None, object, object]:
+    """Note how long the test stood in line for a processor."""
+    before = _waited_s()
+    try:
+        return (yield)
+    finally:
+        item.stash[_WAITED] = _waited_s() - before
+
+
+def _waited_s() -> float:
+    """Return how long this thread was ready to run and another one did: on a busy computer that is not the test's."""
+    try:
+        return int(Path("/proc/thread-self/schedstat").read_text().split()[1]) / 1e9
+    except (OSError, IndexError, ValueError):
+        return 0.0
+
+
 @pytest.hookimpl(wrapper=True, tryfirst=True)
 def pytest_runtest_makereport(
     item: pytest.Item, call: pytest.CallInfo[None]
@@ -77,10 +96,11 @@ def pytest_runtest_makereport(
         report.outcome = "failed"
         report.longrepr = _forbidden_skip(report.longrepr)
     may_be_slow = item.get_closest_marker("slow") or item.get_closest_marker("long")
-    if report.when == "call" and report.passed and call.duration > QUICK_S and not may_be_slow:
+    took_s = call.duration - item.stash.get(_WAITED, 0.0)
+    if report.when == "call" and report.passed and took_s > QUICK_S and not may_be_slow:
         report.outcome = "failed"
         report.longrepr = (
-            f"The test took {call.duration:.1f} s, and {QUICK_S:g} s is the most for one without a mark "
+            f"The test took {took_s:.1f} s, and {QUICK_S:g} s is the most for one without a mark "
             "(make it quicker, or mark it slow or long)."
         )
     return report

@@ -257,6 +257,7 @@ TOKENS = ["a", "b: ", "- ", "\n", "\n  ", "\t", "[", "]", "{", "}", ", ", "? ", 
 TOKENS += ["!!int ", "!x ", "!<", "%YAML 1.1\n", "---\n", "|\n", "#", "@", "on", "1", "2026-01-32", "=", "0x", "é"]
 
 
+@pytest.mark.slow
 @given(st.text() | st.lists(st.sampled_from(TOKENS)).map("".join))
 @example("!!int ''")
 @example("a: '\ud800'")
