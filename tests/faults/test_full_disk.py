@@ -60,6 +60,12 @@ class Life:
         assert self.keeper.task.join(WITHIN_S)
         self.keeper.finish()
 
+    def abandon(self) -> None:
+        """Stop, whatever state it is in."""
+        self.keeper.task.stop()
+        self.keeper.task.join(WITHIN_S)
+        self.journal.close()
+
     def assert_nothing_is_missing(self) -> list[bool]:
         """Compare what is stored with what was given; return of each minute whether its single values are there."""
         assert told(self.path) == list(range(self.minutes))
@@ -72,10 +78,17 @@ class Life:
         return [one.readings is not None for one in velocities]
 
 
+@pytest.fixture
+def node(disk: Path) -> Iterator[Life]:
+    """A keeper on it, not started yet."""
+    made = Life(disk)
+    yield made
+    made.abandon()
+
+
 @pytest.mark.slow
-def test_a_full_disk_costs_old_values_and_no_alarm(disk: Path, figure: Figure) -> None:
+def test_a_full_disk_costs_old_values_and_no_alarm(node: Life, disk: Path, figure: Figure) -> None:
     """Twelve minutes at zero bytes: transitions count at once, readings are committed, and it is told what to do."""
-    node = Life(disk)
     node.keeper.task.start()
     for _ in range(HISTORY_MINUTES):
         node.live()
@@ -112,10 +125,24 @@ def test_a_full_disk_costs_old_values_and_no_alarm(disk: Path, figure: Figure) -
     )
 
 
+def test_a_young_journal_writes_alarms_on_a_full_disk_too(node: Life, disk: Path) -> None:
+    """Nearly all of it stands in the write-ahead log still, which must not have to grow."""
+    node.keeper.task.start()
+    for _ in range(2):
+        node.live()
+    wait_for(lambda: node.keeper.state.pending_s == 0, WITHIN_S, "a commit")
+    for _ in range(3):
+        fill(disk)
+        node.live()
+        wait_for(lambda: len(told(node.path)) == node.minutes, WITHIN_S, "a transition on the full disk")
+    (disk / "filler").unlink()
+    node.end()
+    node.assert_nothing_is_missing()
+
+
 @pytest.mark.slow
-def test_with_nothing_to_give_up_all_waits_and_is_written_later(disk: Path) -> None:
+def test_with_nothing_to_give_up_all_waits_and_is_written_later(node: Life, disk: Path) -> None:
     """A new journal on a full disk: measuring goes on, commands are refused, nothing is lost."""
-    node = Life(disk)
     (disk / "journal.db.ballast").unlink()
     fill(disk)
     node.keeper.task.start()

@@ -2,6 +2,7 @@
 
 import sqlite3
 import time
+from collections.abc import Iterator
 from contextlib import closing
 from dataclasses import replace
 from pathlib import Path
@@ -23,19 +24,30 @@ LIMIT_BYTES = 16 * 2**20  # of the write-ahead log, before it is reported
 RESTING_BYTES = 3_276_800  # what the log may keep once nobody holds it
 
 
-@pytest.mark.slow
-def test_a_disk_that_hangs_for_five_seconds_costs_nothing(tmp_path: Path, figure: Figure) -> None:
-    """Batches go on coming meanwhile: none waits, none is lost, and transitions keep their order."""
+@pytest.fixture
+def keeper(tmp_path: Path) -> Iterator[Keeper]:
+    """A keeper at work, which commits every second."""
     kept = journal(tmp_path, Simulated(), commit_s=1)
     kept.open()
-    keeper = Keeper(kept)
-    keeper.task.start()
+    made = Keeper(kept)
+    made.task.start()
+    yield made
+    made.task.stop()
+    made.task.join(WITHIN_S)
+    kept.close()
+
+
+@pytest.mark.slow
+def test_a_disk_that_hangs_for_five_seconds_costs_nothing(keeper: Keeper, figure: Figure) -> None:
+    """Batches go on coming meanwhile: none waits, none is lost, and transitions keep their order."""
+    path = Path(keeper.state.path)
     random, number, longest_s = np.random.default_rng(1), 0, 0.0
 
     def live(for_s: float) -> None:
         nonlocal number, longest_s
         for _ in range(round(for_s / BATCH_S)):
-            batch = Batch(tuple(second_of(number + 1, random)), (numbered(number),), STATES)
+            told_now = (numbered(2 * number), numbered(2 * number + 1))
+            batch = Batch(tuple(second_of(number + 1, random)), told_now, STATES)
             before_s = time.monotonic()
             keeper.give(batch)
             longest_s = max(longest_s, time.monotonic() - before_s)
@@ -43,22 +55,23 @@ def test_a_disk_that_hangs_for_five_seconds_costs_nothing(tmp_path: Path, figure
             time.sleep(BATCH_S)
 
     live(1.0)
-    with closing(sqlite3.connect(kept.settings.path, isolation_level=None)) as other:
-        wait_for(lambda: told(kept.settings.path) == list(range(4)), WITHIN_S, "the first transitions")
+    with closing(sqlite3.connect(path, isolation_level=None)) as other:
+        wait_for(lambda: told(path) == list(range(8)), WITHIN_S, "the first transitions")
         other.execute("BEGIN IMMEDIATE")
         live(STALL_S)
-        assert told(kept.settings.path) == list(range(4))
+        wait_for(lambda: "cannot be written: database is locked" in keeper.state.trouble, WITHIN_S, "a failed write")
+        assert told(path) == list(range(8))
         highest = keeper.queue.state.highest
         other.execute("ROLLBACK")
     live(1.0)
-    wait_for(lambda: len(told(kept.settings.path)) == number, WITHIN_S, "all transitions")
+    wait_for(lambda: len(told(path)) == 2 * number, WITHIN_S, "all transitions")
     wait_for(lambda: not keeper.state.trouble, WITHIN_S, "no trouble any more")
     keeper.task.stop()
     assert keeper.task.join(WITHIN_S)
     keeper.finish()
 
-    assert told(kept.settings.path) == list(range(number))
-    with open_for_reading(kept.settings.path) as connection:
+    assert told(path) == list(range(2 * number))
+    with open_for_reading(path) as connection:
         seconds = [
             (one.time_ns - START_NS) // SECOND_NS
             for one in readings(connection, point=POINTS[3])
@@ -74,19 +87,15 @@ def test_a_disk_that_hangs_for_five_seconds_costs_nothing(tmp_path: Path, figure
         10,
         f"writes stalled {STALL_S:g} s",
         "ring absorbs, 0 samples lost",
-        f"0 of {number} s lost, 0 of {number} transitions; at most {highest} batches waited, giving one took "
+        f"0 of {number} s lost, 0 of {2 * number} transitions; at most {highest} batches waited, giving one took "
         f"{longest_s * 1000:.0f} ms at most",
     )
 
 
 @pytest.mark.slow
-def test_a_read_that_is_left_open_is_reported(tmp_path: Path, figure: Figure) -> None:
+def test_a_read_that_is_left_open_is_reported(keeper: Keeper, figure: Figure) -> None:
     """With what to do; the writer goes on, and once the reader is gone the log shrinks and nothing is said any more."""
-    kept = journal(tmp_path, Simulated())
-    kept.open()
-    keeper = Keeper(kept)
-    keeper.task.start()
-    path, number = kept.settings.path, 0
+    path, number = Path(keeper.state.path), 0
     log = path.with_name(path.name + "-wal")
 
     def tell(bytes_: int) -> None:

@@ -3,7 +3,7 @@
 import signal
 import threading
 import time
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from types import FrameType
 from typing import Any
 
@@ -19,6 +19,8 @@ from humbell.config import Loaded
 _log = structlog.get_logger()
 # All of the stop, whatever hangs: below the 10 s after which the process is killed from outside.
 _STOP_S = 9.0
+_ENOUGH_SIGNALS = 2  # who sends another one does not want to wait
+_TURN_S = 0.1
 
 
 def run(loaded: Loaded) -> int:
@@ -34,12 +36,11 @@ def run(loaded: Loaded) -> int:
 
         JournalError: there can be no journal.
     """
-    asked = threading.Event()
-    again = threading.Event()
+    heard: list[int] = []
 
     def on_signal(number: int, _frame: FrameType | None) -> None:
-        (again if asked.is_set() else asked).set()
-        _log.info("signal", signal=signal.Signals(number).name)
+        # No event, no log: whatever has a lock may be held by the very code that the signal interrupts.
+        heard.append(number)
 
     for number in (signal.SIGTERM, signal.SIGINT):
         signal.signal(number, on_signal)
@@ -59,12 +60,14 @@ def run(loaded: Loaded) -> int:
     service.start()
     control.task.start()
     _log.info("started", site=loaded.site.site, node=service.node, sources=list(loaded.site.sources))
-    while not asked.wait(0.2) and not service.ended:
-        pass
-    return _stop(service, control, again)
+    while not heard and not service.ended:
+        time.sleep(_TURN_S)
+    if heard:
+        _log.info("signal", signal=signal.Signals(heard[0]).name)
+    return _stop(service, control, heard)
 
 
-def _stop(service: Service, control: Control, again: threading.Event) -> int:
+def _stop(service: Service, control: Control, heard: Sequence[int]) -> int:
     """Stop, in a thread of its own, so that a second signal or the time limit can end the wait."""
     result: list[bool] = []
 
@@ -77,6 +80,6 @@ def _stop(service: Service, control: Control, again: threading.Event) -> int:
     thread = threading.Thread(target=stop, name="stop", daemon=True)
     thread.start()
     until = time.monotonic() + _STOP_S
-    while thread.is_alive() and not again.is_set() and time.monotonic() < until:
+    while thread.is_alive() and len(heard) < _ENOUGH_SIGNALS and time.monotonic() < until:
         thread.join(0.1)
     return 0 if result == [True] else 3

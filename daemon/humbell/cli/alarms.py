@@ -4,11 +4,12 @@ import math
 from pathlib import Path
 from typing import Any
 
+from humbell.app.control import ask, socket_path
 from humbell.app.jsonlines import transition_line, utc_text
 from humbell.cli.ask import ask_or_none, print_json, read, user
 from humbell.config import Loaded
 from humbell.journal import open_for_reading, states, transitions
-from humbell.model import Action, ConfigError, LifeCycle, OutOfReachError
+from humbell.model import Action, ConfigError, LifeCycle
 
 
 def run(config: Path, *, as_json: bool) -> int:
@@ -73,8 +74,8 @@ def acknowledge(config: Path, alarm: str, note: str, *, as_json: bool) -> int:
     point, second, name = rest.partition("/")
     if not (slash and second and machine and point and name):
         raise ConfigError(f"{alarm}: is no alarm (give MACHINE/POINT/ALARM, such as p-101/de-h/velocity_rms.high)")
-    answer = ask_or_none(
-        loaded,
+    answer = ask(
+        socket_path(loaded.site.journal.path),
         {
             "ask": "command",
             "action": Action.ACKNOWLEDGE,
@@ -86,8 +87,6 @@ def acknowledge(config: Path, alarm: str, note: str, *, as_json: bool) -> int:
             "note": note,
         },
     )
-    if answer is None:
-        raise OutOfReachError("an alarm can be acknowledged only while the service runs")
     if as_json:
         print_json(answer)
     else:

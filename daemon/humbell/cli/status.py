@@ -1,5 +1,6 @@
 """`humbell status`."""
 
+from collections import Counter
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
@@ -71,7 +72,8 @@ def _text(answer: Mapping[str, Any]) -> Iterator[str]:
     for source in answer["sources"]:
         age = "never" if source["age_s"] is None else f"{source['age_s']:.1f} s ago"
         yield f"source {source['name']}: {source['state']}, {source['blocks']} blocks, last {age}"
-        drops = source["dropped_blocks"] | source["details"].get("dropped", {})
+        # Each stage refuses for reasons of its own, and some have the same name.
+        drops = Counter(source["dropped_blocks"]) + Counter(source["details"].get("dropped", {}))
         if drops:
             yield "  dropped: " + ", ".join(f"{reason} {count}" for reason, count in sorted(drops.items()))
     yield ""

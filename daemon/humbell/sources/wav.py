@@ -7,7 +7,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.io import wavfile
 
 from humbell.model import ConfigError, InputError, Samples, SampleUnit
 from humbell.sources.recording import Cut, Header, as_samples, check_file, check_header, one_line
@@ -130,6 +129,8 @@ def _scaling(
 
 def _map(path: Path) -> NDArray[Any]:
     """Return stored samples as (n, channels)."""
+    from scipy.io import wavfile  # noqa: PLC0415 - half a second at every start, and few ever play a WAV file
+
     with warnings.catch_warnings():
         # Chunks that scipy does not know are no business of ours; a file that ends too early is.
         warnings.simplefilter("ignore", wavfile.WavFileWarning)

@@ -29,7 +29,7 @@ DAMAGES: dict[str, Callable[[bytes], bytes]] = {
     "overwritten at its beginning": lambda whole: b"\x00" * 100 + whole[100:],
     "overwritten in the middle": lambda whole: whole[:20_000] + b"\xa5" * 8192 + whole[28_192:],
     "with a later file format": lambda whole: whole[:44] + b"\x00\x00\x00\x09" + whole[48:],
-    "with a table's definition damaged": lambda whole: whole.replace(b"TABLE audit", b"TABLE a\xffd\xfe "),
+    "with a table's definition damaged": lambda whole: whole.replace(b"who TEXT", b"who \xff\xfe T"),
     "of something else": lambda _: b"Tarnholm water works, pump house 1\n" * 500,
 }
 

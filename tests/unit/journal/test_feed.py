@@ -126,6 +126,8 @@ def test_what_is_settled_is_not_owed_any_more(db: sqlite3.Connection) -> None:
     owe(db, "scada", 5, 9)
     settle(db, HISTORY, 24)
     assert owed(db, HISTORY) == [(25, 29), (40, 49)]
+    settle(db, HISTORY, 28)
+    assert owed(db, HISTORY) == [(29, 29), (40, 49)]
     settle(db, HISTORY, 29)
     assert owed(db, HISTORY) == [(40, 49)]
     settle(db, HISTORY, 100)

@@ -13,6 +13,7 @@ import pytest
 from humbell.journal import (
     Journal,
     JournalError,
+    alarms,
     chunks,
     deeds,
     entries,
@@ -220,6 +221,18 @@ def test_what_cannot_be_written_goes_on_waiting(kept: Journal, monkeypatch: pyte
     with open_for_reading(kept.settings.path) as connection:
         assert [one.time_ns for one in readings(connection)] == [START_NS + n * SECOND_NS for n in (1, 2, 3)]
         assert sum(entry.seconds for entry in totals(connection)[DE].values()) == 3.0
+
+
+def test_what_fails_half_way_is_undone(kept: Journal, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Whatever it fails at: nothing of it is there, and the next write is a whole one."""
+    with monkeypatch.context() as patch:
+        patch.setattr(alarms, "checkpoint", lambda *_: [].pop())
+        with pytest.raises(IndexError):
+            commit(kept, [reading(1)])
+    kept.tell(*transition(1))
+    assert count(kept) == (1, 0, 0)
+    assert kept.commit({}) == 1
+    assert count(kept) == (1, 1, 0)
 
 
 def noise(first: int, count: int) -> list[Reading]:
