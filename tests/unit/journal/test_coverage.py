@@ -1,9 +1,7 @@
 """The ledger: every second of every point once, in the first category that applies."""
 
 import math
-from collections.abc import Iterator
 from dataclasses import replace
-from pathlib import Path
 
 import pytest
 from hypothesis import given
@@ -12,7 +10,7 @@ from hypothesis import strategies as st
 from humbell.journal import Account, Journal, open_for_reading, totals
 from humbell.journal.coverage import account
 from humbell.model import Cause, Coverage, Measure, Moment, PointId, Quality, Reading
-from unit.journal.given import DE, HOUR_NS, NDE, START_NS, WATCHED, Clock, commit, journal, lost, reading
+from unit.journal.given import DE, HOUR_NS, NDE, START_NS, WATCHED, Clock, commit, lost, reading
 
 READINGS = st.builds(
     reading,
@@ -37,21 +35,6 @@ CATEGORIES = {
     (Quality.BAD, Cause.SETTLING): Coverage.SETTLING,
     (Quality.UNCERTAIN, Cause.SHORT_PIECE): Coverage.MEASURED,
 }
-
-
-@pytest.fixture
-def clock() -> Clock:
-    """The journal's clock."""
-    return Clock()
-
-
-@pytest.fixture
-def kept(tmp_path: Path, clock: Clock) -> Iterator[Journal]:
-    """A new journal, open."""
-    made = journal(tmp_path, clock=clock)
-    made.open()
-    yield made
-    made.close()
 
 
 def ledger(kept: Journal, *span_ns: int) -> dict[PointId, dict[Coverage, Account]]:

@@ -33,7 +33,6 @@ from unit.journal.given import (
     START_NS,
     WATCHED,
     Clock,
-    journal,
     lost,
     reading,
     transition,
@@ -41,21 +40,6 @@ from unit.journal.given import (
 
 QUALITIES = list(Quality)
 Hour = tuple[float, float | None, float | None, int]
-
-
-@pytest.fixture
-def clock() -> Clock:
-    """The journal's clock."""
-    return Clock()
-
-
-@pytest.fixture
-def kept(tmp_path: Path, clock: Clock) -> Iterator[Journal]:
-    """A new journal, open."""
-    made = journal(tmp_path, clock=clock)
-    made.open()
-    yield made
-    made.close()
 
 
 def live(kept: Journal, clock: Clock, readings: list[Reading], commit_s: float = 300.0) -> None:

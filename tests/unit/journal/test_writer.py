@@ -43,21 +43,6 @@ from unit.journal.given import (
 )
 
 
-@pytest.fixture
-def clock() -> Clock:
-    """The journal's clock."""
-    return Clock()
-
-
-@pytest.fixture
-def kept(tmp_path: Path, clock: Clock) -> Iterator[Journal]:
-    """A new journal, open."""
-    made = journal(tmp_path, clock=clock)
-    made.open()
-    yield made
-    made.close()
-
-
 @contextmanager
 def held(kept: Journal) -> Iterator[None]:
     """Let another program write to the journal, for longer than the journal waits."""
